@@ -1,0 +1,131 @@
+"""What the commands print on stdout: plain text in columns, on a terminal as in a file."""
+
+from collections.abc import Iterator, Sequence
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+if TYPE_CHECKING:
+    from trackfit.analysis import Prepared
+    from trackfit.fixes import Fixes
+    from trackfit.frame import Plane
+    from trackfit.inference.fit import Fit
+    from trackfit.layers.layer import Layer
+
+_GAP = "  "
+
+
+def columns(header: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:
+    """Lay rows out under a header: the first column to the left, the others to the right.
+
+    Examples
+    --------
+    >>> columns(["tag", "fixes"], [["A", "120"], ["long", "7"]])
+    ['tag   fixes', 'A       120', 'long      7']
+    """
+    table = [header, *rows]
+    widths = [max(len(row[i]) for row in table) for i in range(len(header))]
+    return [
+        _GAP.join(
+            cell.ljust(width) if i == 0 else cell.rjust(width)
+            for i, (cell, width) in enumerate(zip(row, widths, strict=True))
+        ).rstrip()
+        for row in table
+    ]
+
+
+def parameter_table(fits: "Sequence[Fit]") -> list[str]:
+    """Return the lines of the parameter table: one row a tag and parameter."""
+    rows = [
+        [
+            " ".join((fit.tag, str(row.parameter))),
+            *(f"{x:.4g}" for x in (row.estimate, row.sd, row.lower95, row.upper95)),
+            str(row.unit),
+        ]
+        for fit in fits
+        for row in fit.parameters.itertuples(index=False)
+    ]
+    return columns(["tag and parameter", "estimate", "sd", "lower 95", "upper 95", "unit"], rows)
+
+
+def description(prepared: "Prepared") -> list[str]:
+    """Return the lines that say what the study holds."""
+    return [
+        *_tags(prepared),
+        "",
+        *_set_aside(prepared.fixes),
+        "",
+        *_plane(prepared),
+        "",
+        *_layers(prepared),
+    ]
+
+
+def _tags(prepared: "Prepared") -> list[str]:
+    rows = []
+    for tag in prepared.fixes.tags:
+        times = prepared.fixes.of(tag)["time"]
+        rows.append(
+            [
+                tag,
+                str(len(times)),
+                f"{times.iloc[0]:%Y-%m-%d %H:%M}",
+                f"{times.iloc[-1]:%Y-%m-%d %H:%M}",
+                str(prepared.n_states(tag)),
+            ]
+        )
+    return columns(["tag", "fixes used", "first (UTC)", "last (UTC)", "states"], rows)
+
+
+def _set_aside(fixes: "Fixes") -> list[str]:
+    if fixes.set_aside.empty:
+        return ["No fix is set aside."]
+    lines = [[reason, str(count)] for reason, count in fixes.reason_counts().items()]
+    return [f"Set aside: {len(fixes.set_aside)}", *columns(["reason", "fixes"], lines)]
+
+
+def _plane(prepared: "Prepared") -> list[str]:
+    table = prepared.fixes.table
+    distortion = prepared.plane.distortion(table["lon"], table["lat"])
+    return [
+        f"Plane: {prepared.plane.description}; distances at the fixes hold to {distortion:.2%}."
+    ]
+
+
+def _layers(prepared: "Prepared") -> list[str]:
+    if not prepared.layers:
+        return ["No layers are named."]
+    header = ["layer", "unit", "from", "to", "spacing", "grid", "times", "filled", "outside"]
+    rows = [_layer_row(layer, prepared.plane) for layer in prepared.layers.values()]
+    return columns(header, rows)
+
+
+def _layer_row(layer: "Layer", plane: "Plane") -> list[str]:
+    rows, across = layer.covered.shape
+    low, high = _corners(layer, plane)
+    return [
+        layer.name,
+        layer.unit or "none",
+        low,
+        high,
+        f"{layer.spacing_km:.4g} km",
+        f"{across} x {rows}",
+        "fixed" if layer.fixed else f"{len(layer.hours)}, {_time_span(layer)}",
+        f"{layer.share_filled:.1%}",
+        f"{1 - np.mean(layer.covered):.1%}",
+    ]
+
+
+def _corners(layer: "Layer", plane: "Plane") -> Iterator[str]:
+    """Yield the south-west and north-east corners of a layer's grid, in degrees."""
+    rows, across = layer.covered.shape
+    start = np.array([layer.x0_km, layer.y0_km])
+    size = layer.spacing_km * np.array([across - 1, rows - 1])
+    for lon, lat in zip(*plane.to_lonlat(np.stack([start, start + size])), strict=True):
+        yield f"{abs(lat):.2f}{'NS'[int(lat < 0)]} {abs(lon):.2f}{'EW'[int(lon < 0)]}"
+
+
+def _time_span(layer: "Layer") -> str:
+    first, last = (pd.Timestamp(float(hour), unit="h", tz="UTC") for hour in layer.hours[[0, -1]])
+    return f"{first:%Y-%m-%d} to {last:%Y-%m-%d}"

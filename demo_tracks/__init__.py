@@ -1,0 +1,1 @@
+"""The demo study of trackfit: an invented island, invented animals, invented data."""

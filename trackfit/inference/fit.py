@@ -1,0 +1,429 @@
+"""Fitting one track: the parameters' mode, their uncertainty, and the states given both.
+
+The parameters maximise the Laplace marginal likelihood times their priors, first on a coarse time
+grid, then on the asked one. Their covariance is the inverse Hessian there, by central differences
+of the exact gradient. It is carried into the states to first order:
+
+    cov(z) = V + J Sigma J',      J = dm/dtheta
+
+(the law of total covariance, with the mode for the mean; Kass & Steffey 1989, J. Am. Stat. Assoc.
+84:717).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from enum import Enum
+
+import numpy as np
+import pandas as pd
+from jaxtyping import Float
+
+from trackfit.inference.grid import build_problem, interpolated_start, time_grid
+from trackfit.inference.laplace import (
+    Mode,
+    ModeNotFound,
+    TrackProblem,
+    find_mode,
+    marginal_gradient,
+    mode_sensitivity,
+)
+from trackfit.inference.optimise import (
+    Minimum,
+    Rejected,
+    difference_hessian,
+    minimise,
+    nearest_positive,
+)
+from trackfit.inference.parameters import ParameterSet
+from trackfit.inference.process import Start
+from trackfit.layers.layer import Layer
+from trackfit.motion import Motion, VelocityField
+
+NORMAL_95 = 1.959963984540054
+TOLERANCE = 1e-5
+"""Log-likelihood gain still to be had when a search ends: half a percent of a standard error."""
+
+MIN_FIXES = 3
+
+
+class FitStatus(Enum):
+    """How a fit ended; the value is the sentence the user reads."""
+
+    CONVERGED = "The fit converged."
+    NOT_CONVERGED = (
+        "The search stopped before the parameters settled; estimates and intervals are not to be "
+        "trusted."
+    )
+    NOT_IDENTIFIED = (
+        "The track does not determine every parameter; the intervals of those at fault are not to "
+        "be trusted. Fix one, drop a term, or use the weak priors."
+    )
+    NO_MODE = (
+        "No most probable path was found at the starting values; check the fixes and their errors, "
+        "or use a shorter step."
+    )
+    TOO_FEW_FIXES = "The tag has too few usable fixes to fit; nothing was estimated."
+
+    @property
+    def sentence(self) -> str:
+        """The sentence the user reads."""
+        return self.value
+
+    @property
+    def ok(self) -> bool:
+        """Whether estimates and intervals can be used."""
+        return self is FitStatus.CONVERGED
+
+
+@dataclass(frozen=True)
+class TrackData:
+    """The used fixes of one tag in the plane, in time order."""
+
+    tag: str
+    hours: Float[np.ndarray, " fixes"]
+    at_km: Float[np.ndarray, "fixes 2"]
+    covariance_km2: Float[np.ndarray, "fixes 2 2"]
+
+
+@dataclass(frozen=True)
+class Model:
+    """What is fitted to a track: motion, velocity field with its layers, parameters."""
+
+    motion: Motion
+    field: VelocityField
+    layers: tuple[tuple[Layer | None, ...], Layer | None]
+    parameters: ParameterSet
+    start: Start | None = None
+
+
+@dataclass(frozen=True)
+class FitSettings:
+    """How a track is fitted."""
+
+    step_hours: float = 0.5
+    coarse_factor: int = 4
+    max_iterations: int = 100
+    step_check: bool = False
+
+
+@dataclass(frozen=True)
+class States:
+    """The states of a fitted track on its time grid.
+
+    `theta` and `theta_covariance` are of the free parameters on the engine's scale; `sensitivity`
+    is the derivative of the states in them.
+    """
+
+    problem: TrackProblem
+    mode: Mode
+    covariance: Float[np.ndarray, "states dim dim"]
+    sensitivity: Float[np.ndarray, "states dim free"]
+    theta: Float[np.ndarray, " free"]
+    theta_covariance: Float[np.ndarray, "free free"]
+
+    def total_covariance(self) -> Float[np.ndarray, "states dim dim"]:
+        """Covariance of the states, parameter uncertainty included."""
+        carried = self.sensitivity @ self.theta_covariance
+        return self.covariance + carried @ np.swapaxes(self.sensitivity, 1, 2)
+
+    def draw(self, count: int, rng: np.random.Generator) -> Float[np.ndarray, "count states dim"]:
+        """Joint draws of the whole path from its Gaussian approximation, parameters included."""
+        shape = self.mode.states.shape
+        noise = rng.standard_normal((int(np.prod(shape)), count))
+        around = self.mode.cholesky.solve_transposed_factor(noise).T.reshape(count, *shape)
+        root = np.linalg.cholesky(self.theta_covariance)
+        theta = rng.standard_normal((count, len(self.theta))) @ root.T
+        return self.mode.states + around + np.einsum("sdp,cp->csd", self.sensitivity, theta)
+
+
+@dataclass(frozen=True)
+class Fit:
+    """The fit of one tag.
+
+    Attributes
+    ----------
+    parameters
+        One row a parameter: parameter, unit, estimate, sd, lower95, upper95, fixed.
+    log_marginal
+        Laplace log marginal likelihood of the fixes (in km) at the estimates, priors left out.
+    step_check
+        Change of each free parameter at half the step, in standard errors; None if not asked.
+    states
+        None when nothing could be fitted.
+    """
+
+    tag: str
+    status: FitStatus
+    parameters: pd.DataFrame
+    log_marginal: float
+    n_fixes: int
+    n_states: int
+    step_hours: float
+    iterations: int
+    evaluations: int
+    step_check: pd.DataFrame | None
+    model: Model
+    states: States | None = field(repr=False)
+
+
+Progress = Callable[[float, str], None]
+
+
+def _silent(done: float, message: str) -> None:
+    """Take no notice of progress."""
+
+
+def fit_track(
+    data: TrackData,
+    model: Model,
+    settings: FitSettings,
+    report_hours: Float[np.ndarray, " n"],
+    progress: Progress = _silent,
+) -> Fit:
+    """Fit a model to one track by the fast engine.
+
+    Never raises for what the data do: the status says how it ended.
+    """
+    if len(data.hours) < MIN_FIXES:
+        return _empty(data, model, settings, FitStatus.TOO_FEW_FIXES)
+    coarse_step = settings.step_hours * settings.coarse_factor
+    start = np.array([p.start for p in model.parameters.free])
+    metric = np.diag([p.reach**-2.0 for p in model.parameters.free])
+    try:
+        if settings.coarse_factor > 1:
+            coarse = _Search(data, model, coarse_step, np.zeros(0), None)
+            found = coarse.run(start, metric, settings.max_iterations, _part(progress, 0.0, 0.3))
+            start = found.at
+            metric = coarse.metric(found)
+        fine = _Search(data, model, settings.step_hours, report_hours, None)
+        found = fine.run(start, metric, settings.max_iterations, _part(progress, 0.3, 0.6))
+        progress(0.6, "uncertainty")
+        hessian = fine.hessian(found)
+    except Rejected:
+        return _empty(data, model, settings, FitStatus.NO_MODE)
+    fit = _conclude(data, model, settings, fine, found, hessian)
+    if settings.step_check and fit.states is not None:
+        progress(0.8, "half the step")
+        fit = _with_step_check(fit, data, settings, report_hours, hessian)
+    progress(1.0, "done")
+    return fit
+
+
+def _part(progress: Progress, begin: float, end: float) -> Callable[[int, float], None]:
+    def report(iteration: int, decrement: float) -> None:
+        # the gain still to be had falls from some thousands to the tolerance: a rough clock
+        left = np.clip(np.log10(max(decrement, TOLERANCE) / TOLERANCE) / 8.0, 0.0, 1.0)
+        progress(begin + (end - begin) * (1.0 - float(left)), f"iteration {iteration + 1}")
+
+    return report
+
+
+class _Search:
+    """The function to be minimised on one time grid; remembers the last mode as its next start."""
+
+    def __init__(
+        self,
+        data: TrackData,
+        model: Model,
+        step_hours: float,
+        report_hours: Float[np.ndarray, " n"],
+        states: Float[np.ndarray, "states dim"] | None,
+    ) -> None:
+        hours = time_grid(data.hours, step_hours, report_hours)
+        self.parameters = model.parameters
+        self.problem = build_problem(
+            motion=model.motion,
+            field=model.field,
+            layers=model.layers,
+            hours=hours,
+            fix_hours=data.hours,
+            fix_km=data.at_km,
+            covariance_km2=data.covariance_km2,
+            start=model.start,
+        )
+        self.states = interpolated_start(hours, data.hours, data.at_km, self.problem.dim)
+        self.evaluations = 0
+        self.modes: dict[bytes, Mode] = {}
+
+    def mode(self, free: Float[np.ndarray, " free"]) -> Mode:
+        """The mode of the states; starts from the latest one found."""
+        key = free.tobytes()
+        if key not in self.modes:
+            try:
+                mode = find_mode(self.problem, self.parameters.full(free), self.states)
+            except ModeNotFound as fault:
+                raise Rejected from fault
+            self.evaluations += 1
+            self.states = mode.states
+            self.modes = {key: mode}
+        return self.modes[key]
+
+    def __call__(self, free: Float[np.ndarray, " free"]) -> tuple[float, np.ndarray]:
+        """Negative log posterior of the free parameters and its gradient."""
+        if np.abs(free[[p.positive for p in self.parameters.free]]).max(initial=0.0) > 50.0:
+            raise Rejected
+        with np.errstate(all="ignore"):
+            mode = self.mode(free)
+            gradient = marginal_gradient(self.problem, mode).gradient[self.parameters.free_at]
+        penalty, slope = self.parameters.penalty(free)
+        return mode.negative_log_marginal + penalty, gradient + slope
+
+    def run(
+        self,
+        start: Float[np.ndarray, " free"],
+        metric: Float[np.ndarray, "free free"],
+        max_iterations: int,
+        progress: Callable[[int, float], None],
+    ) -> Minimum:
+        """Search from `start`."""
+        reach = np.array([p.reach for p in self.parameters.free])
+        return minimise(
+            self,
+            start,
+            metric,
+            reach,
+            tolerance=TOLERANCE,
+            max_iterations=max_iterations,
+            progress=progress,
+        )
+
+    def hessian(self, found: Minimum) -> Float[np.ndarray, "free free"]:
+        """Hessian of the negative log posterior at the minimum."""
+        spread = np.sqrt(np.diag(np.linalg.inv(found.metric)))
+        reach = np.array([p.reach for p in self.parameters.free])
+        # a twentieth of a standard error: far above rounding, far below the scale of curvature
+        steps = 0.05 * np.minimum(spread, reach)
+        return difference_hessian(lambda free: self(free)[1], found.at, steps)
+
+    def metric(self, found: Minimum) -> Float[np.ndarray, "free free"]:
+        """A positive definite metric for a search that starts where this one ended."""
+        floor = np.array([p.reach**-2.0 for p in self.parameters.free])
+        try:
+            return nearest_positive(self.hessian(found), floor)
+        except Rejected:
+            return found.metric
+
+
+def _conclude(
+    data: TrackData,
+    model: Model,
+    settings: FitSettings,
+    search: _Search,
+    found: Minimum,
+    hessian: Float[np.ndarray, "free free"],
+) -> Fit:
+    problem, free_at = search.problem, model.parameters.free_at
+    mode = search.mode(found.at)
+    status = FitStatus.CONVERGED if found.converged else FitStatus.NOT_CONVERGED
+    try:
+        np.linalg.cholesky(hessian)
+    except np.linalg.LinAlgError:
+        status = FitStatus.NOT_IDENTIFIED if found.converged else status
+        floor = np.array([p.reach**-2.0 for p in model.parameters.free])
+        hessian = nearest_positive(hessian, floor)
+    covariance = np.linalg.inv(hessian)
+    blocks = marginal_gradient(problem, mode).inverse.covariance
+    states = States(
+        problem=problem,
+        mode=mode,
+        covariance=np.moveaxis(np.asarray(blocks), -1, 0)[: problem.n_states],
+        sensitivity=mode_sensitivity(problem, mode)[..., free_at],
+        theta=found.at,
+        theta_covariance=covariance,
+    )
+    return Fit(
+        tag=data.tag,
+        status=status,
+        parameters=_parameter_table(model.parameters, found.at, covariance),
+        log_marginal=-mode.negative_log_marginal,
+        n_fixes=len(data.hours),
+        n_states=problem.n_states,
+        step_hours=settings.step_hours,
+        iterations=found.iterations,
+        evaluations=search.evaluations,
+        step_check=None,
+        model=model,
+        states=states,
+    )
+
+
+def _with_step_check(
+    fit: Fit,
+    data: TrackData,
+    settings: FitSettings,
+    report_hours: Float[np.ndarray, " n"],
+    hessian: Float[np.ndarray, "free free"],
+) -> Fit:
+    """Refit at half the step, from the estimates, and report each parameter's change."""
+    assert fit.states is not None
+    search = _Search(data, fit.model, 0.5 * settings.step_hours, report_hours, None)
+    free = fit.model.parameters.free
+    floor = np.array([p.reach**-2.0 for p in free])
+    metric = nearest_positive(hessian, floor)
+    change = np.full(len(free), np.nan)
+    try:
+        found = search.run(
+            fit.states.theta, metric, settings.max_iterations, lambda iteration, decrement: None
+        )
+        if found.converged:
+            change = found.at - fit.states.theta
+    except Rejected:
+        pass
+    sd = np.sqrt(np.diag(fit.states.theta_covariance))
+    table = pd.DataFrame({"parameter": [p.name for p in free], "change_in_sd": change / sd})
+    return Fit(**{**fit.__dict__, "step_check": table})
+
+
+def _parameter_table(
+    parameters: ParameterSet,
+    free: Float[np.ndarray, " free"],
+    covariance: Float[np.ndarray, "free free"],
+) -> pd.DataFrame:
+    full = parameters.full(free)
+    sd = np.zeros(len(full))
+    sd[parameters.free_at] = np.sqrt(np.diag(covariance))
+    rows = []
+    for parameter, value, spread in zip(parameters.all, full, sd, strict=True):
+        estimate = parameter.natural(value)
+        rows.append(
+            {
+                "parameter": parameter.name,
+                "unit": parameter.unit,
+                "estimate": estimate,
+                "sd": spread * (estimate if parameter.positive else 1.0),
+                "lower95": parameter.natural(value - NORMAL_95 * spread),
+                "upper95": parameter.natural(value + NORMAL_95 * spread),
+                "fixed": parameter.fixed,
+            }
+        )
+    return pd.DataFrame(rows)
+
+
+def _empty(data: TrackData, model: Model, settings: FitSettings, status: FitStatus) -> Fit:
+    table = pd.DataFrame(
+        {
+            "parameter": [p.name for p in model.parameters.all],
+            "unit": [p.unit for p in model.parameters.all],
+            "estimate": np.nan,
+            "sd": np.nan,
+            "lower95": np.nan,
+            "upper95": np.nan,
+            "fixed": [p.fixed for p in model.parameters.all],
+        }
+    )
+    return Fit(
+        tag=data.tag,
+        status=status,
+        parameters=table,
+        log_marginal=float("nan"),
+        n_fixes=len(data.hours),
+        n_states=0,
+        step_hours=settings.step_hours,
+        iterations=0,
+        evaluations=0,
+        step_check=None,
+        model=model,
+        states=None,
+    )

@@ -1,0 +1,120 @@
+"""The time grid of a track: a regular step, the times to report and the fixes' own times."""
+
+from __future__ import annotations
+
+import jax.numpy as jnp
+import numpy as np
+from jaxtyping import Float
+
+from trackfit.inference.laplace import TrackProblem
+from trackfit.inference.observations import Observations
+from trackfit.inference.process import Start, Steps, Track
+from trackfit.layers.layer import Layer
+from trackfit.layers.splines import TimeBracket, bracket_times
+from trackfit.motion import FieldTimes, Motion, VelocityField
+
+SAME_MOMENT_HOURS = 0.5 / 3600.0
+"""Times closer than half a second share one state: tags report whole seconds."""
+
+START_SD_KM = 1000.0
+"""Prior sd of the first position around the first fix: vague at the scale of any study."""
+
+
+def time_grid(
+    fix_hours: Float[np.ndarray, " fixes"], step_hours: float, report_hours: Float[np.ndarray, " n"]
+) -> Float[np.ndarray, " states"]:
+    """Union of the regular steps (whole multiples since 1970), the times to report and the fixes.
+
+    It runs from the first to the last fix. Times within half a second are one state.
+    """
+    first, last = fix_hours.min(), fix_hours.max()
+    whole = np.arange(np.ceil(first / step_hours), np.floor(last / step_hours) + 1) * step_hours
+    inside = report_hours[(report_hours >= first) & (report_hours <= last)]
+    hours = np.sort(np.concatenate([fix_hours, whole, inside]))
+    apart = np.diff(hours, prepend=-np.inf) > SAME_MOMENT_HOURS
+    return hours[apart]
+
+
+def nearest_state(
+    hours: Float[np.ndarray, " states"], times: Float[np.ndarray, " n"]
+) -> np.ndarray:
+    """Index of the state nearest in time to each moment."""
+    after = np.clip(np.searchsorted(hours, times), 1, max(len(hours) - 1, 1))
+    if len(hours) == 1:
+        return np.zeros(len(times), dtype=int)
+    return np.where(times - hours[after - 1] <= hours[after] - times, after - 1, after)
+
+
+def padded_size(states: int) -> int:
+    """Compiled size for a number of states: 1024, 2048, 4096, 8192, then a fifth more each time.
+
+    One compilation serves all tracks of a size. Padding short tracks costs microseconds, and
+    LAPACK never sees it.
+    """
+    doublings = np.log2(max(states, 1024) / 1024) - 1e-9
+    rungs = np.ceil(doublings) if states <= 8192 else np.ceil(4 * doublings) / 4
+    return 8 * int(np.ceil(128 * 2**rungs))
+
+
+def build_problem(
+    *,
+    motion: Motion,
+    field: VelocityField,
+    layers: tuple[tuple[Layer | None, ...], Layer | None],
+    hours: Float[np.ndarray, " states"],
+    fix_hours: Float[np.ndarray, " fixes"],
+    fix_km: Float[np.ndarray, "fixes 2"],
+    covariance_km2: Float[np.ndarray, "fixes 2 2"],
+    start: Start | None = None,
+) -> TrackProblem:
+    """Lay one track on its time grid.
+
+    Parameters
+    ----------
+    layers
+        The layer behind every term of the field (None for a distance), and the current's layer.
+    start
+        Prior of the first position; by default normal around the first fix, sd `START_SD_KM`.
+    """
+    padded = padded_size(len(hours))
+    extra = padded - len(hours)
+    padded_hours = np.pad(hours, (0, extra), mode="edge")
+    dt = np.pad(np.diff(hours), (0, extra), constant_values=1.0)
+    mask = np.pad(np.ones(len(hours) - 1), (0, extra))
+    if start is None:
+        start = Start(jnp.asarray(fix_km[np.argmin(fix_hours)]), jnp.asarray(START_SD_KM))
+    track = Track(
+        field=field,
+        times=_field_times(layers, padded_hours),
+        steps=Steps(jnp.asarray(dt), jnp.asarray(mask)),
+        start=start,
+    )
+    observations = Observations(nearest_state(hours, fix_hours), fix_km, covariance_km2)
+    return TrackProblem(motion, track, observations, hours)
+
+
+def _field_times(
+    layers: tuple[tuple[Layer | None, ...], Layer | None], hours: np.ndarray
+) -> FieldTimes:
+    still = TimeBracket(jnp.zeros(len(hours), jnp.int32), jnp.zeros(len(hours)))
+    of_terms, current = layers
+    return FieldTimes(
+        tuple(still if layer is None else bracket_times(layer, hours) for layer in of_terms),
+        None if current is None else bracket_times(current, hours),
+    )
+
+
+def interpolated_start(
+    hours: Float[np.ndarray, " states"],
+    fix_hours: Float[np.ndarray, " fixes"],
+    fix_km: Float[np.ndarray, "fixes 2"],
+    dim: int,
+) -> Float[np.ndarray, "states dim"]:
+    """First guess of the states: straight lines between the fixes, at their mean speed."""
+    order = np.argsort(fix_hours, kind="stable")
+    states = np.zeros((len(hours), dim))
+    for axis in range(2):
+        states[:, axis] = np.interp(hours, fix_hours[order], fix_km[order, axis])
+    if dim == 4 and len(hours) > 1:
+        states[:, 2:] = np.gradient(states[:, :2], hours, axis=0)
+    return states

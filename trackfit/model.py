@@ -1,0 +1,245 @@
+"""From a study's settings to the model that the engine fits."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+
+import jax.numpy as jnp
+import numpy as np
+from jaxtyping import Float
+
+from trackfit.faults import LayerError
+from trackfit.frame import Plane
+from trackfit.inference.fit import Model, TrackData
+from trackfit.inference.parameters import Parameter, ParameterSet
+from trackfit.layers.layer import Layer
+from trackfit.layers.splines import Spline, fit_spline
+from trackfit.motion import Diffusive, DistanceTerm, LayerTerm, Motion, VelocityField
+from trackfit.motion.terms import TermName
+from trackfit.motion.velocity import Term
+from trackfit.study import Study
+from trackfit.study_schema import Preference
+
+DRIFT_PRIOR = (1.0, 1.0)
+"""Mean and sd of the current drift's weak prior: carried wholly, give or take the whole."""
+
+SCALE_PRIOR_LOG_SD = 1.0
+"""Sd of the logarithm of the error scale around zero: 95 % between a seventh and sevenfold."""
+
+MOTIONS: dict[str, Motion] = {"diffusive": Diffusive()}
+
+
+@dataclass(frozen=True)
+class Standard:
+    """How a layer is standardised: z = (value - centre)/scale, both in the layer's unit."""
+
+    centre: float
+    scale: float
+
+
+@dataclass(frozen=True)
+class StudyModel:
+    """A study's model, the same for all its tags but for where the search starts."""
+
+    base: Model
+    names: tuple[TermName, ...]
+    standards: Mapping[str, Standard]
+
+    def for_track(self, data: TrackData) -> Model:
+        """The model with the motion's parameters started from a track's own pace."""
+        motion = self.base.motion
+        starts = motion.starting_values(typical_diffusion(data))
+        parameters = tuple(
+            replace(p, start=float(np.log(starts[i]))) if i < len(starts) else p
+            for i, p in enumerate(self.base.parameters.all)
+        )
+        return replace(self.base, parameters=ParameterSet(parameters))
+
+
+def typical_diffusion(data: TrackData) -> float:
+    """Rough diffusion of a track, km per sqrt(hour): the median over neighbouring fixes.
+
+    For each pair, (squared distance - what the errors explain) / (2 x hours between), a moment
+    estimate of sigma^2 in two dimensions; never below a hundredth of the raw one.
+    """
+    hours = np.diff(data.hours)
+    apart = hours > 1.0 / 60.0
+    if not apart.any():
+        return 1.0
+    moved = np.sum(np.diff(data.at_km, axis=0) ** 2, axis=1)
+    errors = np.trace(data.covariance_km2, axis1=1, axis2=2)
+    raw = (moved / (2.0 * hours.clip(1e-9)))[apart]
+    net = ((moved - errors[1:] - errors[:-1]) / (2.0 * hours.clip(1e-9)))[apart]
+    variance = max(float(np.median(net)), 0.01 * float(np.mean(raw)), 1e-6)
+    return float(np.sqrt(variance))
+
+
+def build_model(study: Study, layers: Mapping[str, Layer], plane: Plane) -> StudyModel:
+    """Make the velocity field and the parameters that a study asks for.
+
+    Raises
+    ------
+    LayerError
+        A layer of the preference is the same everywhere, so that nothing can be learnt from it.
+    """
+    splines = {name: fit_spline(layer) for name, layer in layers.items()}
+    standards = {
+        name: _standard(layer, study.layers[name].centre, study.layers[name].scale)
+        for name, layer in layers.items()
+        if not study.layers[name].is_current
+    }
+    terms: list[Term] = []
+    behind: list[Layer | None] = []
+    names: list[TermName] = []
+    parameters: list[Parameter] = []
+    for preference in study.preference:
+        layer = layers[preference.layer] if preference.layer else None
+        if layer is None:
+            terms.append(_distance_term(preference, plane))
+            names.append(TermName(preference.term, "distance", "km"))
+        else:
+            terms.append(_layer_term(preference, splines[layer.name], standards[layer.name]))
+            names.append(TermName(preference.term, layer.name, layer.unit))
+        behind.append(layer)
+        parameters += _term_parameters(study, preference, layer, standards)
+    current = layers[study.current.layer] if study.current else None
+    motion = MOTIONS[study.motion.kind]
+    return StudyModel(
+        base=Model(
+            motion=motion,
+            field=VelocityField(tuple(terms), None if current is None else splines[current.name]),
+            layers=(tuple(behind), current),
+            parameters=ParameterSet(
+                (
+                    *_motion_parameters(study, motion),
+                    *parameters,
+                    *_drift_parameter(study),
+                    _scale_parameter(study),
+                )
+            ),
+        ),
+        names=tuple(names),
+        standards=standards,
+    )
+
+
+def _layer_term(preference: Preference, spline: Spline, standard: Standard) -> LayerTerm:
+    return LayerTerm(
+        spline,
+        jnp.asarray(standard.centre),
+        jnp.asarray(standard.scale),
+        humped=preference.shape == "humped",
+    )
+
+
+def _distance_term(preference: Preference, plane: Plane) -> DistanceTerm:
+    point = preference.point
+    assert point is not None
+    return DistanceTerm(jnp.asarray(plane.to_plane([point.lon], [point.lat])[0]))
+
+
+def _seen(layer: Layer) -> np.ndarray:
+    """Nodes with values of their own: inside the source, not filled in from neighbours."""
+    seen = layer.covered & ~layer.filled
+    return seen if seen.any() else layer.covered
+
+
+def _standard(layer: Layer, centre: float | None, scale: float | None) -> Standard:
+    values = layer.values[:, _seen(layer), 0]
+    spread = float(values.std())
+    if spread == 0.0:
+        raise LayerError(
+            f"layer '{layer.name}' ({layer.source}): it has one value everywhere in the study "
+            "area, so nothing can be learnt from it; leave it out or use a finer file"
+        )
+    return Standard(
+        float(values.mean()) if centre is None else centre, spread if scale is None else scale
+    )
+
+
+def _motion_parameters(study: Study, motion: Motion) -> list[Parameter]:
+    weak = study.fit.priors == "weak"
+    return [
+        Parameter(
+            name=p.name,
+            unit=p.unit,
+            positive=True,
+            start=float(np.log(p.prior_median)),
+            prior_mean=float(np.log(p.prior_median)),
+            prior_sd=p.prior_log_sd if weak else np.inf,
+            reach=1.0,
+        )
+        for p in motion.parameters
+    ]
+
+
+def _term_parameters(
+    study: Study, preference: Preference, layer: Layer | None, standards: Mapping[str, Standard]
+) -> list[Parameter]:
+    name = f"preference.{preference.term}"
+    if layer is None:
+        return [_amplitude(study, f"{name}.distance", "km/h", 1.0)]
+    standard = standards[layer.name]
+    z = (layer.values[..., 0] - standard.centre) / standard.scale
+    powers = {"linear": z, "squared": z**2} if preference.shape == "humped" else {"linear": z}
+    return [
+        _amplitude(study, f"{name}.{power}", "km^2/h", _rms_slope(values, layer))
+        for power, values in powers.items()
+    ]
+
+
+def _rms_slope(values: Float[np.ndarray, "times ny nx"], layer: Layer) -> float:
+    """Root mean square slope of a potential over the study area, per km."""
+    along_y, along_x = np.gradient(values, layer.spacing_km, axis=(1, 2))
+    squared = (along_x**2 + along_y**2)[:, _seen(layer)]
+    return float(np.sqrt(squared.mean()))
+
+
+def _amplitude(study: Study, name: str, unit: str, rms_slope: float) -> Parameter:
+    """An amplitude whose prior sd makes the study's typical speed on typical slopes."""
+    scale = study.fit.prior_speed_kmh / rms_slope
+    return Parameter(
+        name=name,
+        unit=unit,
+        positive=False,
+        start=0.0,
+        prior_mean=0.0,
+        prior_sd=scale if study.fit.priors == "weak" else np.inf,
+        reach=scale,
+    )
+
+
+def _drift_parameter(study: Study) -> list[Parameter]:
+    if study.current is None:
+        return []
+    drift = study.current.drift
+    estimated = isinstance(drift, str)
+    mean, sd = DRIFT_PRIOR
+    return [
+        Parameter(
+            name="current.drift",
+            unit="1",
+            positive=False,
+            start=mean if isinstance(drift, str) else float(drift),
+            prior_mean=mean,
+            prior_sd=sd if estimated and study.fit.priors == "weak" else np.inf,
+            reach=0.5,
+            fixed=not estimated,
+        )
+    ]
+
+
+def _scale_parameter(study: Study) -> Parameter:
+    scale = study.errors.scale
+    estimated = isinstance(scale, str)
+    return Parameter(
+        name="error_scale",
+        unit="1",
+        positive=True,
+        start=0.0 if isinstance(scale, str) else float(np.log(scale)),
+        prior_mean=0.0,
+        prior_sd=SCALE_PRIOR_LOG_SD if estimated and study.fit.priors == "weak" else np.inf,
+        reach=1.0,
+        fixed=not estimated,
+    )

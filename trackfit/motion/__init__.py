@@ -1,0 +1,16 @@
+"""How animals move: the velocity field they follow and the steps in which they follow it."""
+
+from trackfit.motion.diffusive import Diffusive
+from trackfit.motion.motion import Motion, MotionParameter, Transition
+from trackfit.motion.velocity import DistanceTerm, FieldTimes, LayerTerm, VelocityField
+
+__all__ = [
+    "Diffusive",
+    "DistanceTerm",
+    "FieldTimes",
+    "LayerTerm",
+    "Motion",
+    "MotionParameter",
+    "Transition",
+    "VelocityField",
+]

@@ -1,0 +1,22 @@
+"""Figures of a study: one page a tag, and what the tags prefer."""
+
+from trackfit.report.figures import figure_writers, file_stem
+from trackfit.report.response_figure import PathValues, response_figure, response_pages
+from trackfit.report.scene import FixPoints, Scene
+from trackfit.report.style import CAUTION, FIGURE_FORMATS, house_style, save_figure
+from trackfit.report.track_figure import track_figure
+
+__all__ = [
+    "CAUTION",
+    "FIGURE_FORMATS",
+    "FixPoints",
+    "PathValues",
+    "Scene",
+    "figure_writers",
+    "file_stem",
+    "house_style",
+    "response_figure",
+    "response_pages",
+    "save_figure",
+    "track_figure",
+]

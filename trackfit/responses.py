@@ -1,0 +1,104 @@
+"""The response to each preference term: h along the layer's values, with its band."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from jaxtyping import Float
+
+from trackfit.inference.fit import NORMAL_95, Fit
+from trackfit.layers.splines import spline_jet
+from trackfit.motion import LayerTerm
+from trackfit.motion.terms import TermName
+
+POINTS = 101
+
+
+@dataclass(frozen=True)
+class Response:
+    """How much one tag likes each value of a layer, or each distance from a point.
+
+    Attributes
+    ----------
+    at
+        Values of the layer (unit `unit`), over the range that the fitted path met.
+    h
+        Preference there, km^2/h; zero at the layer's centre, or at the point.
+    lower95, upper95
+        Pointwise 95 % band from the parameters' covariance.
+    on_path
+        The layer's values along the fitted path.
+    """
+
+    tag: str
+    term: str
+    layer: str
+    unit: str
+    at: Float[np.ndarray, " m"]
+    h: Float[np.ndarray, " m"]
+    lower95: Float[np.ndarray, " m"]
+    upper95: Float[np.ndarray, " m"]
+    on_path: Float[np.ndarray, " n"]
+
+
+def responses_of(fit: Fit, names: tuple[TermName, ...]) -> list[Response]:
+    """The response to every preference term of a fitted tag; none where nothing was fitted."""
+    if fit.states is None:
+        return []
+    first = len(fit.model.motion.parameters)
+    found = []
+    for slot, (term, name) in enumerate(zip(fit.model.field.terms, names, strict=True)):
+        places = range(first, first + term.n_amplitudes)
+        found.append(_response(fit, slot, name, np.array(places)))
+        first += term.n_amplitudes
+    return found
+
+
+def _response(fit: Fit, slot: int, name: TermName, places: np.ndarray) -> Response:
+    assert fit.states is not None
+    on_path = _along_path(fit, slot)
+    at = np.linspace(on_path.min(), on_path.max(), POINTS)
+    basis = _basis(fit, slot, at)
+    theta = fit.states.mode.theta[places]
+    h = basis @ theta
+    sd = np.sqrt(np.einsum("mi,ij,mj->m", basis, _covariance(fit, places), basis))
+    return Response(
+        tag=fit.tag,
+        term=name.term,
+        layer=name.layer,
+        unit=name.unit,
+        at=at,
+        h=h,
+        lower95=h - NORMAL_95 * sd,
+        upper95=h + NORMAL_95 * sd,
+        on_path=on_path,
+    )
+
+
+def _along_path(fit: Fit, slot: int) -> Float[np.ndarray, " n"]:
+    assert fit.states is not None
+    term = fit.model.field.terms[slot]
+    problem = fit.states.problem
+    x, y = fit.states.mode.states[:, 0], fit.states.mode.states[:, 1]
+    if not isinstance(term, LayerTerm):
+        point = np.asarray(term.point_km)
+        return np.hypot(x - point[0], y - point[1])
+    when = problem.track.times.terms[slot]
+    when = type(when)(*(part[: problem.n_states] for part in when))
+    return np.asarray(spline_jet(term.spline, when, x, y, 0))[0, 0]
+
+
+def _basis(fit: Fit, slot: int, at: Float[np.ndarray, " m"]) -> Float[np.ndarray, "m amplitudes"]:
+    term = fit.model.field.terms[slot]
+    if not isinstance(term, LayerTerm):
+        return at[:, None]
+    z = (at - float(term.centre)) / float(term.scale)
+    return np.stack([z, z**2], axis=1) if term.humped else z[:, None]
+
+
+def _covariance(fit: Fit, places: np.ndarray) -> Float[np.ndarray, "k k"]:
+    assert fit.states is not None
+    free = list(fit.model.parameters.free_at)
+    at = [free.index(place) for place in places]
+    return fit.states.theta_covariance[np.ix_(at, at)]

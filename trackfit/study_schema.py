@@ -1,0 +1,389 @@
+"""What a study file may say: every table and key, with its unit, default, limits and meaning.
+
+The descriptions are the reference page ``docs/study-file.md``; nothing is written twice. Rules that
+concern one table stand here; rules between tables stand in :mod:`trackfit.study`.
+"""
+
+from typing import Annotated, Literal, Self
+
+from pydantic import BaseModel, ConfigDict, Field, model_validator
+
+from trackfit.study_values import (
+    ESTIMATED,
+    CurrentShare,
+    ErrorScale,
+    ExistingFile,
+    Files,
+    Folder,
+    Formats,
+    PositiveMetres,
+    ProjectedCrs,
+    Text,
+    Texts,
+    TimeZone,
+    Unit,
+    refuse,
+    setting,
+    unit_dimensions,
+)
+
+MINUTE_HOURS = 1 / 60
+"""Shortest step and interval: below it a tag's clock and the layers say nothing more."""
+
+
+class Table(BaseModel):
+    """A table of the study file: unknown keys refused, types not bent, values fixed once read."""
+
+    model_config = ConfigDict(strict=True, extra="forbid", frozen=True, allow_inf_nan=False)
+
+
+class About(Table):
+    """What the study is called and which tags it takes."""
+
+    name: Text = setting(..., "The name of the study; it heads the report and every file written.")
+    seed: int = setting(
+        1,
+        "Start of the random numbers. The same seed, data and version give the same drawn paths.",
+        ge=0,
+        lt=2**32,
+    )
+    tags: Texts = setting(
+        (), "Fit only these tags, by the names the fixes give them.", shown="every tag in the fixes"
+    )
+
+
+class Columns(Table):
+    """The headers of your tables, where they differ from trackfit's own names.
+
+    Only the columns you name are looked up under your header; the others keep their own name. Any
+    column but `time`, `lon` and `lat` may be missing from a table.
+    """
+
+    tag: Text | None = setting(
+        None, "Name of the tag (one deployment on one animal).", shown="`tag`"
+    )
+    time: Text | None = setting(None, "Date and time of the fix.", shown="`time`")
+    lon: Text | None = setting(None, "Longitude of the fix.", unit="degrees east", shown="`lon`")
+    lat: Text | None = setting(None, "Latitude of the fix.", unit="degrees north", shown="`lat`")
+    gps_sd_m: Text | None = setting(
+        None,
+        "Standard deviation of a satellite-navigation fix, along each axis.",
+        unit="metres",
+        shown="`gps_sd_m`",
+    )
+    error_class: Text | None = setting(
+        None,
+        "The supplier's quality class of the fix, looked up in `[errors.classes]`.",
+        shown="`error_class`",
+    )
+    ellipse_major_m: Text | None = setting(
+        None,
+        "Longer half-axis of the supplier's error ellipse.",
+        unit="metres",
+        shown="`ellipse_major_m`",
+    )
+    ellipse_minor_m: Text | None = setting(
+        None,
+        "Shorter half-axis of the supplier's error ellipse.",
+        unit="metres",
+        shown="`ellipse_minor_m`",
+    )
+    ellipse_bearing_deg: Text | None = setting(
+        None,
+        "Direction of the longer half-axis.",
+        unit="degrees clockwise from true north",
+        shown="`ellipse_bearing_deg`",
+    )
+
+    @model_validator(mode="after")
+    def _one_header_each(self) -> Self:
+        given = self.mapping()
+        used = {name: name for name in type(self).model_fields if name not in given}
+        for column, header in given.items():
+            if header in used:
+                refuse(f"this header is the one of {used[header]} already", key=column)
+            used[header] = column
+        return self
+
+    def mapping(self) -> dict[str, str]:
+        """Return trackfit's column name -> the header in the files, for the columns named."""
+        return {name: header for name, header in self if header is not None}
+
+
+class FixesFiles(Table):
+    """Where the fixes are, and how the tables are written."""
+
+    files: Files = setting(
+        ...,
+        "Tables of fixes, one row a fix: CSV (also gzipped) or Parquet. A track may go on in a "
+        "second file.",
+    )
+    delimiter: Annotated[str, Field(min_length=1, max_length=1)] | None = setting(
+        None,
+        r'What parts the columns: one character (`"\t"` for a tab).',
+        shown="found from the file",
+    )
+    decimal: Literal[".", ","] = setting(".", "The decimal mark of the numbers.")
+    time_zone: TimeZone = setting(
+        "UTC", "Zone of the times that carry none, by its IANA name. Results are always in UTC."
+    )
+    columns: Columns = setting(Columns, "Your headers, where they differ.", shown="own names")
+
+    @model_validator(mode="after")
+    def _marks_and_files(self) -> Self:
+        if self.delimiter == self.decimal:
+            refuse("the decimal mark cannot part the columns too", key="delimiter")
+        real = [path.resolve() for path in self.files]
+        if len(set(real)) < len(real):
+            refuse("each file may stand once", key="files")
+        return self
+
+
+class PlaneSettings(Table):
+    """The flat map on which the movement is worked out."""
+
+    crs: ProjectedCrs | None = setting(
+        None,
+        "A projected coordinate system in metres, as an authority code, WKT or PROJ text.",
+        shown="an equal-area plane centred on the fixes",
+    )
+
+
+class LayerSettings(Table):
+    """One gridded variable over the sea; the name after `layers.` is yours to choose."""
+
+    file: ExistingFile = setting(..., "A NetCDF or GeoTIFF file.")
+    variable: Text | None = setting(
+        None, "Variable to read from a NetCDF file.", shown="the only gridded variable in the file"
+    )
+    east: Text | None = setting(
+        None,
+        "Variable with the eastward part of a current; of a GeoTIFF the band, as text.",
+    )
+    north: Text | None = setting(
+        None,
+        "Variable with the northward part of a current; of a GeoTIFF the band, as text.",
+    )
+    band: int = setting(1, "Band to read from a GeoTIFF file, counted from 1.", ge=1)
+    select: dict[str, float] = setting(
+        dict,
+        "For a variable with more dimensions than time, y and x: the coordinate to take along each "
+        "further dimension, such as `{ depth = 0.5 }`.",
+        shown="nothing",
+    )
+    unit: Unit | None = setting(
+        None,
+        "Unit of the values, where the file gives none or a wrong one.",
+        shown="the file's unit",
+    )
+    to_unit: Unit | None = setting(
+        None,
+        "Unit to turn the values into before anything else. A current always becomes km/h.",
+        shown="the unit they have",
+    )
+    factor: float = setting(
+        1.0, "Multiply the values by this after any change of unit; -1 turns heights into depths."
+    )
+    resolution_km: float | None = setting(
+        None, "Spacing of the working grid.", unit="kilometres", shown="near the file's own", gt=0
+    )
+    centre: float | None = setting(
+        None,
+        "Value taken as zero when the layer is standardised.",
+        unit="the layer's unit",
+        shown="the layer's mean",
+    )
+    scale: float | None = setting(
+        None,
+        "Difference taken as one when the layer is standardised.",
+        unit="the layer's unit",
+        shown="the layer's standard deviation",
+        gt=0,
+    )
+
+    @property
+    def is_current(self) -> bool:
+        """Whether the layer holds the two parts of a current."""
+        return self.east is not None and self.north is not None
+
+    @model_validator(mode="after")
+    def _scalar_or_current(self) -> Self:
+        if self.factor == 0:
+            refuse("must not be 0: every value would vanish", key="factor")
+        if (self.east is None) != (self.north is None):
+            here, absent = ("east", "north") if self.north is None else ("north", "east")
+            refuse(f"a current needs both parts, and {absent} is missing", key=here)
+        if self.is_current:
+            self._refuse_beside_a_current()
+        if (
+            self.unit
+            and self.to_unit
+            and unit_dimensions(self.unit) != unit_dimensions(self.to_unit)
+        ):
+            refuse(f'"{self.unit}" cannot become a unit of another kind', key="to_unit")
+        return self
+
+    def _refuse_beside_a_current(self) -> None:
+        for key in ("variable", "to_unit", "centre", "scale"):
+            if getattr(self, key) is not None:
+                refuse("has no place in a layer with east and north (a current)", key=key)
+        if self.east == self.north:
+            refuse("east and north name the same variable", key="north")
+
+
+class CoastFile(Table):
+    """Land, for the maps and for telling a position at sea from one ashore."""
+
+    file: ExistingFile = setting(..., "Polygons of land: GeoPackage, GeoJSON or shapefile.")
+
+
+class Motion(Table):
+    """How the animal is taken to move between fixes."""
+
+    kind: Literal["diffusive"] = setting(
+        "diffusive",
+        "`diffusive`: a drift up the preference and with the current, plus unmodelled movement "
+        "that spreads with the square root of time.",
+    )
+    step_hours: float = setting(
+        0.5,
+        "Longest step in the working grid of times; all fix times are added to it.",
+        unit="hours",
+        ge=MINUTE_HOURS,
+        le=24,
+    )
+
+
+class Point(Table):
+    """A place, such as a colony."""
+
+    lon: float = setting(..., "Longitude of the place.", unit="degrees east", ge=-180, le=360)
+    lat: float = setting(..., "Latitude of the place.", unit="degrees north", ge=-90, le=90)
+
+
+class Preference(Table):
+    """One term of the preference: what draws the animal. Give the table once for each term."""
+
+    name: Text | None = setting(
+        None,
+        "Name of the term in the tables and figures; a `point` needs one.",
+        shown="the layer's",
+    )
+    layer: Text | None = setting(None, "The layer the term is made of.")
+    point: Point | None = setting(None, "Or the place whose distance the term uses.")
+    shape: Literal["linear", "humped", "distance"] = setting(
+        ...,
+        "`linear`: the more the better, or the worse. `humped`: a best value with less on both "
+        "sides. `distance`: towards or away from a point.",
+    )
+
+    @property
+    def term(self) -> str:
+        """The name of the term in tables and figures."""
+        return self.name or self.layer or ""
+
+    @model_validator(mode="after")
+    def _layer_or_point(self) -> Self:
+        if self.layer is not None and self.point is not None:
+            refuse("a term has a layer or a point, not both", key="point")
+        if self.shape == "distance" and self.point is None:
+            refuse('shape "distance" needs a point', key="shape", hint="linear")
+        if self.shape != "distance" and self.layer is None:
+            near = "distance" if self.point is not None else ""
+            refuse(f'shape "{self.shape}" needs a layer', key="shape", hint=near)
+        if self.point is not None and self.name is None:
+            refuse('a term with a point needs a name, such as "colony"', key="name")
+        return self
+
+
+class Current(Table):
+    """Which layer carries the animal, and how far."""
+
+    layer: Text = setting(..., "A layer with `east` and `north`.")
+    drift: CurrentShare = setting(
+        ESTIMATED,
+        "Share of the water's velocity the animal takes on: `estimated`, or a number between 0 "
+        "(not carried) and 2; 1 is carried wholly.",
+    )
+
+
+class Errors(Table):
+    """What a fix says about the position: how far off it may be."""
+
+    ellipse_probability: float = setting(
+        0.632,
+        "Probability that the supplier's error ellipse holds the true position. 0.632 means "
+        "half-axes of sqrt(2) standard deviations, 0.393 means one.",
+        unit="probability",
+        gt=0,
+        lt=1,
+    )
+    default_sd_m: float | None = setting(
+        None,
+        "Standard deviation along each axis of a fix that nothing else describes.",
+        unit="metres",
+        shown="such fixes are set aside",
+        gt=0,
+    )
+    scale: ErrorScale = setting(
+        1.0,
+        "Multiplies every error size: a number above 0, or `estimated` for one common factor.",
+    )
+    classes: dict[str, PositiveMetres] = setting(
+        dict,
+        "Quality class -> standard deviation along each axis, over the built-in ones.",
+        unit="metres",
+        shown="the built-in table",
+    )
+
+
+class Fit(Table):
+    """How the parameters are found."""
+
+    priors: Literal["weak", "none"] = setting(
+        "weak",
+        "`weak`: mild limits from what animals can do. `none`: the data alone; a parameter the "
+        "data do not speak about then has no answer.",
+    )
+    prior_speed_kmh: float = setting(
+        2.0, "Typical speed of the animal, on which the weak priors rest.", unit="km/h", gt=0
+    )
+    coarse_factor: int = setting(
+        4, "The search starts on steps this many times longer; 1 leaves this out.", ge=1, le=64
+    )
+    step_check: bool = setting(
+        False, "Fit again with half the step and report how far the estimates move."
+    )
+    max_iterations: int = setting(100, "Longest search before it counts as not converged.", ge=1)
+
+
+class Paths(Table):
+    """The positions to write out."""
+
+    interval_hours: float = setting(
+        1.0,
+        "Time between written positions; a whole number of steps.",
+        unit="hours",
+        ge=MINUTE_HOURS,
+        le=168,
+    )
+    gap_hours: float = setting(
+        12.0,
+        "Positions between fixes further apart than this are marked as in a gap.",
+        unit="hours",
+        gt=0,
+    )
+    draws: int = setting(20, "Number of possible paths to draw for each tag.", ge=0, le=10_000)
+
+
+class Output(Table):
+    """Where the results go, and in what form."""
+
+    folder: Folder = setting(
+        "results", "Folder for the results, made if absent.", validate_default=True
+    )
+    formats: Formats = setting(
+        ("csv", "geopackage", "geojson", "netcdf"), "Files of positions to write.", shown="all four"
+    )
+    figures: bool = setting(True, "Draw maps and response curves.")
+    figure_format: Literal["png", "svg", "pdf"] = setting("png", "File type of the figures.")
