@@ -68,7 +68,12 @@ class Prepared:
     def n_states(self, tag: str) -> int:
         """States on the time grid of a tag."""
         return len(
-            time_grid(self.tracks[tag].hours, self.study.motion.step_hours, self.report_hours(tag))
+            time_grid(
+                self.tracks[tag].hours,
+                self.study.motion.step_hours,
+                self.report_hours(tag),
+                self.model.base.motion.same_moment_hours,
+            )
         )
 
     def report_hours(self, tag: str) -> Float[np.ndarray, " n"]:
@@ -271,7 +276,7 @@ def _fit_tag(prepared: Prepared, tag: str, progress: TagProgress) -> Fit:
         lambda done, message: progress(tag, done, message),
     )
     if fit.states is not None:
-        hours, at_km = fit.states.problem.hours, fit.states.mode.states[:, :2]
+        hours, at_km = fit.states.problem.hours, fit.states.mean[:, :2]
         for layer in _used_layers(study, prepared.layers).values():
             _check_inside(tag, "fitted path", hours, at_km, layer, prepared.plane)
     return fit

@@ -15,7 +15,7 @@ from trackfit.inference.fit import Model, TrackData
 from trackfit.inference.parameters import Parameter, ParameterSet
 from trackfit.layers.layer import Layer
 from trackfit.layers.splines import Spline, fit_spline
-from trackfit.motion import Diffusive, DistanceTerm, LayerTerm, Motion, VelocityField
+from trackfit.motion import Diffusive, DistanceTerm, LayerTerm, Motion, Persistent, VelocityField
 from trackfit.motion.terms import TermName
 from trackfit.motion.velocity import Term
 from trackfit.study import Study
@@ -27,7 +27,10 @@ DRIFT_PRIOR = (1.0, 1.0)
 SCALE_PRIOR_LOG_SD = 1.0
 """Sd of the logarithm of the error scale around zero: 95 % between a seventh and sevenfold."""
 
-MOTIONS: dict[str, Motion] = {"diffusive": Diffusive()}
+NU_PRIOR = (5.0, 1.0)
+"""Median and log sd of the weak prior of a tail's degrees of freedom."""
+
+MOTIONS: dict[str, Motion] = {"diffusive": Diffusive(), "persistent": Persistent()}
 
 
 @dataclass(frozen=True)
@@ -49,7 +52,7 @@ class StudyModel:
     def for_track(self, data: TrackData) -> Model:
         """The model with the motion's parameters started from a track's own pace."""
         motion = self.base.motion
-        starts = motion.starting_values(typical_diffusion(data))
+        starts = motion.starting_values(typical_diffusion(data), typical_spacing_hours(data))
         parameters = tuple(
             replace(p, start=float(np.log(starts[i]))) if i < len(starts) else p
             for i, p in enumerate(self.base.parameters.all)
@@ -73,6 +76,11 @@ def typical_diffusion(data: TrackData) -> float:
     net = ((moved - errors[1:] - errors[:-1]) / (2.0 * hours.clip(1e-9)))[apart]
     variance = max(float(np.median(net)), 0.01 * float(np.mean(raw)), 1e-6)
     return float(np.sqrt(variance))
+
+
+def typical_spacing_hours(data: TrackData) -> float:
+    """Median time between neighbouring fixes, an hour at least."""
+    return max(1.0, float(np.median(np.diff(data.hours)))) if len(data.hours) > 1 else 1.0
 
 
 def build_model(study: Study, layers: Mapping[str, Layer], plane: Plane) -> StudyModel:
@@ -116,8 +124,10 @@ def build_model(study: Study, layers: Mapping[str, Layer], plane: Plane) -> Stud
                     *parameters,
                     *_drift_parameter(study),
                     _scale_parameter(study),
+                    *_tail_parameter(study),
                 )
             ),
+            heavy=study.errors.tails == "heavy",
         ),
         names=tuple(names),
         standards=standards,
@@ -160,18 +170,22 @@ def _standard(layer: Layer, centre: float | None, scale: float | None) -> Standa
 
 def _motion_parameters(study: Study, motion: Motion) -> list[Parameter]:
     weak = study.fit.priors == "weak"
-    return [
-        Parameter(
-            name=p.name,
-            unit=p.unit,
-            positive=True,
-            start=float(np.log(p.prior_median)),
-            prior_mean=float(np.log(p.prior_median)),
-            prior_sd=p.prior_log_sd if weak else np.inf,
-            reach=1.0,
+    speed_log = float(np.log(study.fit.prior_speed_kmh))
+    parameters = []
+    for p in motion.parameters:
+        centre = float(np.log(p.prior_median)) + p.speed_power * speed_log
+        parameters.append(
+            Parameter(
+                name=p.name,
+                unit=p.unit,
+                positive=True,
+                start=centre,
+                prior_mean=centre,
+                prior_sd=p.prior_log_sd if weak else np.inf,
+                reach=1.0,
+            )
         )
-        for p in motion.parameters
-    ]
+    return parameters
 
 
 def _term_parameters(
@@ -243,3 +257,23 @@ def _scale_parameter(study: Study) -> Parameter:
         reach=1.0,
         fixed=not estimated,
     )
+
+
+def _tail_parameter(study: Study) -> list[Parameter]:
+    if study.errors.tails != "heavy":
+        return []
+    nu = study.errors.tail_nu
+    median, log_sd = NU_PRIOR
+    estimated = isinstance(nu, str)
+    return [
+        Parameter(
+            name="tail_nu",
+            unit="1",
+            positive=True,
+            start=float(np.log(median if isinstance(nu, str) else nu)),
+            prior_mean=float(np.log(median)),
+            prior_sd=log_sd if estimated and study.fit.priors == "weak" else np.inf,
+            reach=1.0,
+            fixed=not estimated,
+        )
+    ]

@@ -83,7 +83,7 @@ def fill_track(
     grid = fit.states.problem.hours
     wanted = np.concatenate([report_hours(grid[0], grid[-1], interval_hours), fix_hours])
     at = np.unique(nearest_state(grid, wanted))
-    xy_km = fit.states.mode.states[at, :2]
+    xy_km = fit.states.mean[at, :2]
     covariance = fit.states.total_covariance()[at, :2, :2]
     lon, lat = plane.to_lonlat(xy_km)
     to_ground = np.linalg.inv(plane.ground_to_plane(lon, lat))

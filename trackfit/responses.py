@@ -60,7 +60,7 @@ def _response(fit: Fit, slot: int, name: TermName, places: np.ndarray) -> Respon
     on_path = _along_path(fit, slot)
     at = np.linspace(on_path.min(), on_path.max(), POINTS)
     basis = _basis(fit, slot, at)
-    theta = fit.states.mode.theta[places]
+    theta = fit.states.approximation.theta[places]
     h = basis @ theta
     sd = np.sqrt(np.einsum("mi,ij,mj->m", basis, _covariance(fit, places), basis))
     return Response(
@@ -80,7 +80,7 @@ def _along_path(fit: Fit, slot: int) -> Float[np.ndarray, " n"]:
     assert fit.states is not None
     term = fit.model.field.terms[slot]
     problem = fit.states.problem
-    x, y = fit.states.mode.states[:, 0], fit.states.mode.states[:, 1]
+    x, y = fit.states.mean[:, 0], fit.states.mean[:, 1]
     if not isinstance(term, LayerTerm):
         point = np.asarray(term.point_km)
         return np.hypot(x - point[0], y - point[1])

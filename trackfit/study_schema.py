@@ -18,6 +18,7 @@ from trackfit.study_values import (
     Formats,
     PositiveMetres,
     ProjectedCrs,
+    TailWeight,
     Text,
     Texts,
     TimeZone,
@@ -240,10 +241,11 @@ class CoastFile(Table):
 class Motion(Table):
     """How the animal is taken to move between fixes."""
 
-    kind: Literal["diffusive"] = setting(
+    kind: Literal["diffusive", "persistent"] = setting(
         "diffusive",
         "`diffusive`: a drift up the preference and with the current, plus unmodelled movement "
-        "that spreads with the square root of time.",
+        "that spreads with the square root of time. `persistent`: the animal keeps heading; its "
+        "velocity relaxes to that same drift over a persistence time.",
     )
     step_hours: float = setting(
         0.5,
@@ -328,6 +330,16 @@ class Errors(Table):
     scale: ErrorScale = setting(
         1.0,
         "Multiplies every error size: a number above 0, or `estimated` for one common factor.",
+    )
+    tails: Literal["normal", "heavy"] = setting(
+        "normal",
+        "`normal`: errors as stated. `heavy`: a few fixes may be far worse than stated (bivariate "
+        "Student-t errors); such fixes then weigh little by themselves.",
+    )
+    tail_nu: TailWeight = setting(
+        ESTIMATED,
+        "Degrees of freedom of heavy tails: `estimated`, or a number from 0.5; the smaller, the "
+        "heavier. Above 30 tails are all but normal.",
     )
     classes: dict[str, PositiveMetres] = setting(
         dict,

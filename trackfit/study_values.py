@@ -132,6 +132,12 @@ def _current_share(value: float | str) -> float | str:
     return value
 
 
+def _tail_weight(value: float | str) -> float | str:
+    if isinstance(value, float) and not value >= 0.5:
+        refuse("must be 0.5 or more")
+    return value
+
+
 def _time_zone(value: str) -> str:
     from zoneinfo import ZoneInfo, available_timezones
 
@@ -204,6 +210,7 @@ TimeZone = Annotated[Text, AfterValidator(_time_zone)]
 ProjectedCrs = Annotated[Text, AfterValidator(_projected_crs)]
 _Estimable = Annotated[float | Literal["estimated"], PlainValidator(_estimated_or_number)]
 ErrorScale = Annotated[_Estimable, AfterValidator(_positive_unless_estimated)]
+TailWeight = Annotated[_Estimable, AfterValidator(_tail_weight)]
 CurrentShare = Annotated[_Estimable, AfterValidator(_current_share)]
 PositiveMetres = Annotated[float, Field(gt=0)]
 Format = Literal["csv", "geopackage", "geojson", "netcdf"]

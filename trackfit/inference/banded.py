@@ -1,4 +1,4 @@
-"""Banded symmetric algebra by LAPACK: factor, solve, and the inverse inside the band.
+"""Banded symmetric algebra by LAPACK: factor, solve, and diagonal blocks of the inverse.
 
 A block tridiagonal matrix of n blocks of size d is kept as an array (n, d, 2 d): entry [i, c, m] is
 the element m rows below the diagonal in column i d + c. Read as (n d, 2 d) in C order it is what
@@ -9,10 +9,8 @@ from __future__ import annotations
 
 from typing import NamedTuple
 
-import jax
-import jax.numpy as jnp
 import numpy as np
-from jaxtyping import Array, Float
+from jaxtyping import Float, Int
 from scipy.linalg import lapack
 
 
@@ -85,120 +83,37 @@ def dense(band: Float[np.ndarray, "n dim 2*dim"]) -> Float[np.ndarray, "n*dim n*
     return matrix
 
 
-class BandInverse(NamedTuple):
-    """Blocks of an inverse inside the band: cov(z_i) and cov(z_i, z_(i+1)), states last."""
+def block_covariances(
+    band: Float[np.ndarray, "n dim width"],
+    forward: Cholesky,
+    backward: Cholesky,
+    at: Int[np.ndarray, " k"],
+) -> Float[np.ndarray, "k dim dim"]:
+    """Diagonal blocks of the inverse at some states: inv(Sf_i + Sb_i - D_i).
 
-    covariance: Float[Array, "dim dim n"]
-    neighbour: Float[Array, "dim dim n-1"]
-
-
-def band_inverse(
-    band: Float[np.ndarray, "n dim 2*dim"], forward: Cholesky, padded: int
-) -> BandInverse:
-    """Blocks of the inverse inside the band, without a recursion over states.
-
-    Factored forwards, the Schur complement Sf_i = L_ii L_ii' is the precision of state i given all
-    that comes before it (marginalised) and its own block; factored in reverse, Sb_i the same from
-    the other end. The joint precision of neighbours is then [[Sf_i, E_i], [E_i', Sb_(i+1)]] (the
-    two-filter form of the smoother; Fraser & Potter 1969), inverted for all i at once.
-
-    The blocks are padded with zeros to `padded` states.
+    `backward` is the factor of the reversed matrix. Factored forwards, the Schur complement Sf_i =
+    L_ii L_ii' is the precision of state i given all that comes before it and its own block D_i;
+    factored in reverse, Sb_i the same from the other end (the two-filter form of the smoother;
+    Fraser & Potter 1969, IEEE Trans. Autom. Control 14:387).
     """
-    backward = factor(reversed_band(band))
     n, dim, width = band.shape
-    forward_columns = forward.storage.T.reshape(n, dim, width)
-    backward_columns = backward.storage.T.reshape(n, dim, width)[::-1]
-    fill = np.zeros((padded - n, dim, width))
-    fill[:, :, 0] = 1.0
-    covariance, neighbour = _neighbour_covariances(
-        *(jnp.asarray(np.concatenate([a, fill])) for a in (forward_columns, backward_columns, band))
-    )
-    real = np.arange(padded) < n
-    return BandInverse(jnp.where(real, covariance, 0.0), jnp.where(real[1:], neighbour, 0.0))
+    before = _lower_triangles(forward.storage.T.reshape(n, dim, width)[at])
+    after = _lower_triangles(backward.storage.T.reshape(n, dim, width)[n - 1 - at])
+    own = _lower_triangles(band[at])
+    own = own + np.swapaxes(np.tril(own, -1), 1, 2)
+    before = before @ np.swapaxes(before, 1, 2)
+    after = (after @ np.swapaxes(after, 1, 2))[:, ::-1, ::-1]
+    return np.linalg.inv(before + after - own)
 
 
-@jax.jit
-def _neighbour_covariances(
-    forward: Float[Array, "n dim width"],
-    backward: Float[Array, "n dim width"],
-    band: Float[Array, "n dim width"],
-) -> tuple[Float[Array, "dim dim n"], Float[Array, "dim dim n-1"]]:
-    dim = forward.shape[1]
-    before = _schur(forward)
-    after = _schur(backward)[::-1, ::-1]
-    couple = jnp.stack(
-        [jnp.stack([band[:-1, c, dim + r - c] for r in range(dim)]) for c in range(dim)]
-    )
-    # a single state has no neighbour: the last state's own block comes from the forward factor
-    last = inverse_of_blocks(before[..., -1:])
-    if forward.shape[0] == 1:
-        return last, couple
-    first_first, first_second, _ = _inverse_of_pair(before[..., :-1], couple, after[..., 1:])
-    return jnp.concatenate([first_first, last], axis=-1), first_second
-
-
-def _schur(columns: Float[Array, "n dim width"]) -> Float[Array, "dim dim n"]:
-    """L_ii L_ii' of every block, from the banded columns."""
+def _lower_triangles(columns: Float[np.ndarray, "k dim width"]) -> Float[np.ndarray, "k dim dim"]:
     dim = columns.shape[1]
-    zero = jnp.zeros(columns.shape[0])
-    factor_rows = [
-        [columns[:, c, r - c] if r >= c else zero for c in range(dim)] for r in range(dim)
-    ]
-    return jnp.stack(
-        [
-            jnp.stack(
-                [
-                    sum((factor_rows[r][m] * factor_rows[s][m] for m in range(min(r, s) + 1)), zero)
-                    for s in range(dim)
-                ]
-            )
-            for r in range(dim)
-        ]
-    )
-
-
-def inverse_of_blocks(matrix: Float[Array, "dim dim n"]) -> Float[Array, "dim dim n"]:
-    """Inverses of many small symmetric positive definite matrices, by halving."""
-    dim = matrix.shape[0]
-    if dim == 1:
-        return 1.0 / matrix
-    half = dim // 2
-    a, b, c = _inverse_of_pair(matrix[:half, :half], matrix[:half, half:], matrix[half:, half:])
-    return jnp.concatenate(
-        [jnp.concatenate([a, b], axis=1), jnp.concatenate([jnp.swapaxes(b, 0, 1), c], axis=1)]
-    )
-
-
-def _inverse_of_pair(
-    a: Float[Array, "m m n"], b: Float[Array, "m l n"], d: Float[Array, "l l n"]
-) -> tuple[Float[Array, "m m n"], Float[Array, "m l n"], Float[Array, "l l n"]]:
-    """Blocks of the inverse of [[A, B], [B', D]] through the Schur complement of A."""
-    a_inverse = inverse_of_blocks(a)
-    ab = _product(a_inverse, b)
-    complement = inverse_of_blocks(d - _product(jnp.swapaxes(b, 0, 1), ab))
-    off = -_product(ab, complement)
-    return a_inverse - _product(off, jnp.swapaxes(ab, 0, 1)), off, complement
-
-
-def _product(a: Float[Array, "m l n"], b: Float[Array, "l p n"]) -> Float[Array, "m p n"]:
-    total = a[:, 0, None] * b[None, 0]
-    for j in range(1, a.shape[1]):
-        total = total + a[:, j, None] * b[None, j]
-    return total
+    lower = np.zeros((len(columns), dim, dim))
+    for c in range(dim):
+        lower[:, c:, c] = columns[:, c, : dim - c]
+    return lower
 
 
 def _check(info: int) -> None:
     if info != 0:
         raise NotPositiveDefinite
-
-
-__all__ = [
-    "BandInverse",
-    "Cholesky",
-    "NotPositiveDefinite",
-    "band_inverse",
-    "dense",
-    "factor",
-    "inverse_of_blocks",
-    "reversed_band",
-]

@@ -21,14 +21,8 @@ import pandas as pd
 from jaxtyping import Float
 
 from trackfit.inference.grid import build_problem, interpolated_start, time_grid
-from trackfit.inference.laplace import (
-    Mode,
-    ModeNotFound,
-    TrackProblem,
-    find_mode,
-    marginal_gradient,
-    mode_sensitivity,
-)
+from trackfit.inference.laplace import ModeNotFound, mode_sensitivity
+from trackfit.inference.marginal import Approximation, Warm, approximate
 from trackfit.inference.optimise import (
     Minimum,
     Rejected,
@@ -37,6 +31,7 @@ from trackfit.inference.optimise import (
     nearest_positive,
 )
 from trackfit.inference.parameters import ParameterSet
+from trackfit.inference.problem import TrackProblem
 from trackfit.inference.process import Start
 from trackfit.layers.layer import Layer
 from trackfit.motion import Motion, VelocityField
@@ -89,12 +84,17 @@ class TrackData:
 
 @dataclass(frozen=True)
 class Model:
-    """What is fitted to a track: motion, velocity field with its layers, parameters."""
+    """What is fitted to a track: motion, velocity field with its layers, parameters, errors.
+
+    `heavy` errors are bivariate Student-t, normal ones else. `start` is the prior of the first
+    position, vague around the first fix if None.
+    """
 
     motion: Motion
     field: VelocityField
     layers: tuple[tuple[Layer | None, ...], Layer | None]
     parameters: ParameterSet
+    heavy: bool = False
     start: Start | None = None
 
 
@@ -116,12 +116,21 @@ class States:
     is the derivative of the states in them.
     """
 
-    problem: TrackProblem
-    mode: Mode
+    approximation: Approximation
     covariance: Float[np.ndarray, "states dim dim"]
     sensitivity: Float[np.ndarray, "states dim free"]
     theta: Float[np.ndarray, " free"]
     theta_covariance: Float[np.ndarray, "free free"]
+
+    @property
+    def problem(self) -> TrackProblem:
+        """The track on its time grid."""
+        return self.approximation.problem
+
+    @property
+    def mean(self) -> Float[np.ndarray, "states dim"]:
+        """Posterior mean of the states: the mode and its first-order correction."""
+        return self.approximation.mode.states + self.approximation.spread.adjoint
 
     def total_covariance(self) -> Float[np.ndarray, "states dim dim"]:
         """Covariance of the states, parameter uncertainty included."""
@@ -130,12 +139,14 @@ class States:
 
     def draw(self, count: int, rng: np.random.Generator) -> Float[np.ndarray, "count states dim"]:
         """Joint draws of the whole path from its Gaussian approximation, parameters included."""
-        shape = self.mode.states.shape
+        shape = self.mean.shape
         noise = rng.standard_normal((int(np.prod(shape)), count))
-        around = self.mode.cholesky.solve_transposed_factor(noise).T.reshape(count, *shape)
+        around = self.approximation.mode.cholesky.solve_transposed_factor(noise).T.reshape(
+            count, *shape
+        )
         root = np.linalg.cholesky(self.theta_covariance)
         theta = rng.standard_normal((count, len(self.theta))) @ root.T
-        return self.mode.states + around + np.einsum("sdp,cp->csd", self.sensitivity, theta)
+        return self.mean + around + np.einsum("sdp,cp->csd", self.sensitivity, theta)
 
 
 @dataclass(frozen=True)
@@ -145,7 +156,8 @@ class Fit:
     Attributes
     ----------
     parameters
-        One row a parameter: parameter, unit, estimate, sd, lower95, upper95, fixed.
+        One row a parameter: parameter, unit, estimate, sd, lower95, upper95, role (estimated, fixed
+        or derived from others).
     log_marginal
         Laplace log marginal likelihood of the fixes (in km) at the estimates, priors left out.
     step_check
@@ -193,11 +205,11 @@ def fit_track(
     metric = np.diag([p.reach**-2.0 for p in model.parameters.free])
     try:
         if settings.coarse_factor > 1:
-            coarse = _Search(data, model, coarse_step, np.zeros(0), None)
+            coarse = _Search(data, model, coarse_step, np.zeros(0))
             found = coarse.run(start, metric, settings.max_iterations, _part(progress, 0.0, 0.3))
             start = found.at
             metric = coarse.metric(found)
-        fine = _Search(data, model, settings.step_hours, report_hours, None)
+        fine = _Search(data, model, settings.step_hours, report_hours)
         found = fine.run(start, metric, settings.max_iterations, _part(progress, 0.3, 0.6))
         progress(0.6, "uncertainty")
         hessian = fine.hessian(found)
@@ -229,9 +241,8 @@ class _Search:
         model: Model,
         step_hours: float,
         report_hours: Float[np.ndarray, " n"],
-        states: Float[np.ndarray, "states dim"] | None,
     ) -> None:
-        hours = time_grid(data.hours, step_hours, report_hours)
+        hours = time_grid(data.hours, step_hours, report_hours, model.motion.same_moment_hours)
         self.parameters = model.parameters
         self.problem = build_problem(
             motion=model.motion,
@@ -242,33 +253,44 @@ class _Search:
             fix_km=data.at_km,
             covariance_km2=data.covariance_km2,
             start=model.start,
+            heavy=model.heavy,
         )
-        self.states = interpolated_start(hours, data.hours, data.at_km, self.problem.dim)
+        states = interpolated_start(
+            hours, data.hours, data.at_km, self.problem.dim, robust=model.heavy
+        )
+        self.cold = self.warm = Warm(states)
         self.evaluations = 0
-        self.modes: dict[bytes, Mode] = {}
+        self.latest: tuple[bytes, Approximation] | None = None
 
-    def mode(self, free: Float[np.ndarray, " free"]) -> Mode:
-        """The mode of the states; starts from the latest one found."""
+    def at(self, free: Float[np.ndarray, " free"]) -> Approximation:
+        """The approximation at some parameters; starts from the latest one, else anew."""
         key = free.tobytes()
-        if key not in self.modes:
+        if self.latest is None or self.latest[0] != key:
+            theta = self.parameters.full(free)
             try:
-                mode = find_mode(self.problem, self.parameters.full(free), self.states)
-            except ModeNotFound as fault:
-                raise Rejected from fault
+                found = approximate(self.problem, theta, self.warm)
+            except ModeNotFound:
+                found = self._anew(theta)
             self.evaluations += 1
-            self.states = mode.states
-            self.modes = {key: mode}
-        return self.modes[key]
+            self.warm = found.warm
+            self.latest = (key, found)
+        return self.latest[1]
+
+    def _anew(self, theta: Float[np.ndarray, " parameters"]) -> Approximation:
+        try:
+            return approximate(self.problem, theta, self.cold)
+        except ModeNotFound as fault:
+            raise Rejected from fault
 
     def __call__(self, free: Float[np.ndarray, " free"]) -> tuple[float, np.ndarray]:
         """Negative log posterior of the free parameters and its gradient."""
         if np.abs(free[[p.positive for p in self.parameters.free]]).max(initial=0.0) > 50.0:
             raise Rejected
         with np.errstate(all="ignore"):
-            mode = self.mode(free)
-            gradient = marginal_gradient(self.problem, mode).gradient[self.parameters.free_at]
+            found = self.at(free)
+            gradient = found.gradient()[self.parameters.free_at]
         penalty, slope = self.parameters.penalty(free)
-        return mode.negative_log_marginal + penalty, gradient + slope
+        return found.negative_log_marginal + penalty, gradient + slope
 
     def run(
         self,
@@ -315,7 +337,7 @@ def _conclude(
     hessian: Float[np.ndarray, "free free"],
 ) -> Fit:
     problem, free_at = search.problem, model.parameters.free_at
-    mode = search.mode(found.at)
+    best = search.at(found.at)
     status = FitStatus.CONVERGED if found.converged else FitStatus.NOT_CONVERGED
     try:
         np.linalg.cholesky(hessian)
@@ -324,20 +346,19 @@ def _conclude(
         floor = np.array([p.reach**-2.0 for p in model.parameters.free])
         hessian = nearest_positive(hessian, floor)
     covariance = np.linalg.inv(hessian)
-    blocks = marginal_gradient(problem, mode).inverse.covariance
+    blocks = best.spread.steps.covariance
     states = States(
-        problem=problem,
-        mode=mode,
+        approximation=best,
         covariance=np.moveaxis(np.asarray(blocks), -1, 0)[: problem.n_states],
-        sensitivity=mode_sensitivity(problem, mode)[..., free_at],
+        sensitivity=mode_sensitivity(problem, best.mode)[..., free_at],
         theta=found.at,
         theta_covariance=covariance,
     )
     return Fit(
         tag=data.tag,
         status=status,
-        parameters=_parameter_table(model.parameters, found.at, covariance),
-        log_marginal=-mode.negative_log_marginal,
+        parameters=parameter_table(model, found.at, covariance),
+        log_marginal=-best.negative_log_marginal,
         n_fixes=len(data.hours),
         n_states=problem.n_states,
         step_hours=settings.step_hours,
@@ -358,7 +379,7 @@ def _with_step_check(
 ) -> Fit:
     """Refit at half the step, from the estimates, and report each parameter's change."""
     assert fit.states is not None
-    search = _Search(data, fit.model, 0.5 * settings.step_hours, report_hours, None)
+    search = _Search(data, fit.model, 0.5 * settings.step_hours, report_hours)
     free = fit.model.parameters.free
     floor = np.array([p.reach**-2.0 for p in free])
     metric = nearest_positive(hessian, floor)
@@ -376,43 +397,58 @@ def _with_step_check(
     return Fit(**{**fit.__dict__, "step_check": table})
 
 
-def _parameter_table(
-    parameters: ParameterSet,
+def parameter_table(
+    model: Model,
     free: Float[np.ndarray, " free"],
     covariance: Float[np.ndarray, "free free"],
 ) -> pd.DataFrame:
-    full = parameters.full(free)
-    sd = np.zeros(len(full))
-    sd[parameters.free_at] = np.sqrt(np.diag(covariance))
-    rows = []
-    for parameter, value, spread in zip(parameters.all, full, sd, strict=True):
-        estimate = parameter.natural(value)
-        rows.append(
-            {
-                "parameter": parameter.name,
-                "unit": parameter.unit,
-                "estimate": estimate,
-                "sd": spread * (estimate if parameter.positive else 1.0),
-                "lower95": parameter.natural(value - NORMAL_95 * spread),
-                "upper95": parameter.natural(value + NORMAL_95 * spread),
-                "fixed": parameter.fixed,
-            }
+    """Estimates on the reported scale, with standard deviations and 95 % intervals.
+
+    Intervals are normal on the engine's scale; that of a positive parameter is of its logarithm.
+    """
+    full = model.parameters.full(free)
+    wide = np.zeros((len(full), len(full)))
+    wide[np.ix_(model.parameters.free_at, model.parameters.free_at)] = covariance
+    rows = [
+        _row(
+            p.name,
+            p.unit,
+            p.positive,
+            value,
+            wide[i, i] ** 0.5,
+            "fixed" if p.fixed else "estimated",
         )
+        for i, (p, value) in enumerate(zip(model.parameters.all, full, strict=True))
+    ]
+    for derived in model.motion.derived:
+        powers = np.zeros(len(full))
+        powers[: len(derived.powers)] = derived.powers
+        spread = float(powers @ wide @ powers) ** 0.5
+        rows.append(_row(derived.name, derived.unit, True, powers @ full, spread, "derived"))
     return pd.DataFrame(rows)
 
 
+def _row(
+    name: str, unit: str, positive: bool, value: float, spread: float, role: str
+) -> dict[str, object]:
+    def natural(x: float) -> float:
+        return float(np.exp(x)) if positive else float(x)
+
+    return {
+        "parameter": name,
+        "unit": unit,
+        "estimate": natural(value),
+        "sd": spread * (natural(value) if positive else 1.0),
+        "lower95": natural(value - NORMAL_95 * spread),
+        "upper95": natural(value + NORMAL_95 * spread),
+        "role": role,
+    }
+
+
 def _empty(data: TrackData, model: Model, settings: FitSettings, status: FitStatus) -> Fit:
-    table = pd.DataFrame(
-        {
-            "parameter": [p.name for p in model.parameters.all],
-            "unit": [p.unit for p in model.parameters.all],
-            "estimate": np.nan,
-            "sd": np.nan,
-            "lower95": np.nan,
-            "upper95": np.nan,
-            "fixed": [p.fixed for p in model.parameters.all],
-        }
-    )
+    free = np.array([p.start for p in model.parameters.free])
+    table = parameter_table(model, free, np.zeros((len(free), len(free))))
+    table.loc[table["role"] != "fixed", ["estimate", "sd", "lower95", "upper95"]] = np.nan
     return Fit(
         tag=data.tag,
         status=status,

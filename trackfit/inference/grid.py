@@ -6,33 +6,59 @@ import jax.numpy as jnp
 import numpy as np
 from jaxtyping import Float
 
-from trackfit.inference.laplace import TrackProblem
 from trackfit.inference.observations import Observations
+from trackfit.inference.problem import TrackProblem
 from trackfit.inference.process import Start, Steps, Track
+from trackfit.inference.sites import neighbour_medians
 from trackfit.layers.layer import Layer
 from trackfit.layers.splines import TimeBracket, bracket_times
 from trackfit.motion import FieldTimes, Motion, VelocityField
 
-SAME_MOMENT_HOURS = 0.5 / 3600.0
-"""Times closer than half a second share one state: tags report whole seconds."""
+CROWDED_SHARE = 0.1
+"""A regular step closer than this share of the step to a fix or a report time is left out."""
 
 START_SD_KM = 1000.0
 """Prior sd of the first position around the first fix: vague at the scale of any study."""
 
 
 def time_grid(
-    fix_hours: Float[np.ndarray, " fixes"], step_hours: float, report_hours: Float[np.ndarray, " n"]
+    fix_hours: Float[np.ndarray, " fixes"],
+    step_hours: float,
+    report_hours: Float[np.ndarray, " n"],
+    same_moment_hours: float,
 ) -> Float[np.ndarray, " states"]:
-    """Union of the regular steps (whole multiples since 1970), the times to report and the fixes.
+    """The fixes' times, the times to report, and regular steps (whole multiples since 1970).
 
-    It runs from the first to the last fix. Times within half a second are one state.
+    It runs from the first to the last fix. A fix closer than `same_moment_hours` to the one before,
+    or a report time so close to a fix, shares its state; regular steps that crowd either are left
+    out. Precisions of very short steps would drown all other information in rounding.
     """
     first, last = fix_hours.min(), fix_hours.max()
-    whole = np.arange(np.ceil(first / step_hours), np.floor(last / step_hours) + 1) * step_hours
+    fixes = _apart(np.sort(fix_hours), same_moment_hours)
     inside = report_hours[(report_hours >= first) & (report_hours <= last)]
-    hours = np.sort(np.concatenate([fix_hours, whole, inside]))
-    apart = np.diff(hours, prepend=-np.inf) > SAME_MOMENT_HOURS
-    return hours[apart]
+    held = np.sort(np.concatenate([fixes, _away_from(inside, fixes, same_moment_hours)]))
+    whole = np.arange(np.ceil(first / step_hours), np.floor(last / step_hours) + 1) * step_hours
+    steps = _away_from(whole, held, max(CROWDED_SHARE * step_hours, same_moment_hours))
+    return np.sort(np.concatenate([held, steps]))
+
+
+def _apart(hours: Float[np.ndarray, " n"], least_hours: float) -> Float[np.ndarray, " m"]:
+    """Sorted times, less those closer than a limit to the last one kept."""
+    if (np.diff(hours) >= least_hours).all():
+        return hours
+    kept = [hours[0]]
+    for hour in hours[1:]:
+        if hour - kept[-1] >= least_hours:
+            kept.append(hour)
+    return np.array(kept)
+
+
+def _away_from(
+    times: Float[np.ndarray, " n"], others: Float[np.ndarray, " m"], least_hours: float
+) -> Float[np.ndarray, " k"]:
+    """Times no closer than a limit to any of some sorted others."""
+    nearest = others[nearest_state(others, times)]
+    return times[np.abs(times - nearest) >= least_hours]
 
 
 def nearest_state(
@@ -66,6 +92,7 @@ def build_problem(
     fix_km: Float[np.ndarray, "fixes 2"],
     covariance_km2: Float[np.ndarray, "fixes 2 2"],
     start: Start | None = None,
+    heavy: bool = False,
 ) -> TrackProblem:
     """Lay one track on its time grid.
 
@@ -75,6 +102,8 @@ def build_problem(
         The layer behind every term of the field (None for a distance), and the current's layer.
     start
         Prior of the first position; by default normal around the first fix, sd `START_SD_KM`.
+    heavy
+        Errors are bivariate Student-t.
     """
     padded = padded_size(len(hours))
     extra = padded - len(hours)
@@ -89,7 +118,7 @@ def build_problem(
         steps=Steps(jnp.asarray(dt), jnp.asarray(mask)),
         start=start,
     )
-    observations = Observations(nearest_state(hours, fix_hours), fix_km, covariance_km2)
+    observations = Observations(nearest_state(hours, fix_hours), fix_km, covariance_km2, heavy)
     return TrackProblem(motion, track, observations, hours)
 
 
@@ -109,12 +138,18 @@ def interpolated_start(
     fix_hours: Float[np.ndarray, " fixes"],
     fix_km: Float[np.ndarray, "fixes 2"],
     dim: int,
+    *,
+    robust: bool = False,
 ) -> Float[np.ndarray, "states dim"]:
-    """First guess of the states: straight lines between the fixes, at their mean speed."""
+    """First guess of the states: straight lines between the fixes, at their mean speed.
+
+    With `robust`, between medians of five neighbouring fixes.
+    """
     order = np.argsort(fix_hours, kind="stable")
+    at_km = fix_km - neighbour_medians(fix_km, fix_hours)[0] if robust else fix_km
     states = np.zeros((len(hours), dim))
     for axis in range(2):
-        states[:, axis] = np.interp(hours, fix_hours[order], fix_km[order, axis])
+        states[:, axis] = np.interp(hours, fix_hours[order], at_km[order, axis])
     if dim == 4 and len(hours) > 1:
         states[:, 2:] = np.gradient(states[:, :2], hours, axis=0)
     return states

@@ -28,10 +28,6 @@ class Parameter:
     reach: float
     fixed: bool = False
 
-    def natural(self, value: float) -> float:
-        """From the engine's scale to the reported one."""
-        return float(np.exp(value)) if self.positive else float(value)
-
 
 @dataclass(frozen=True)
 class ParameterSet:

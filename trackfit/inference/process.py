@@ -1,6 +1,6 @@
 """The negative log density of a track's states and what the Laplace approximation needs of it.
 
-For states z_i on a time grid the process part of the negative log density is
+For states z_i on a time grid the negative log density of the process is
 
     f(z; theta) = sum_i [ 1/2 r_i' W_i r_i + log det Q_i ] + start,
     r_i = z_(i+1) - F_i z_i - G_i u(x_i, t_i)
@@ -12,12 +12,16 @@ tridiagonal:
     H_(i+1,i+1) += W
     H_(i,i+1)    = - J' W
 
+The start is one more such term, with the residual (x_0 - mean, v_0 - u(x_0, t_0)): the first
+position is vague, and the first velocity spreads around the field as in the long run.
+
 Everything here is compiled by JAX, vectorised over steps, and evaluates each spline once. Arrays
 hold the quantities of a state first and the steps last; padded steps have mask zero.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from functools import partial
 from typing import NamedTuple
 
@@ -34,9 +38,11 @@ from trackfit.motion.blocks import (
     apply,
     both_axes,
     dot,
+    inverse,
     minus,
     packed,
     product,
+    symmetric,
     times,
     total,
     transposed,
@@ -54,17 +60,10 @@ class Steps(NamedTuple):
     mask: Float[Array, " steps"]
 
 
-class Sightings(NamedTuple):
-    """What the fixes say of each state's position: mean, and precision as (xx, xy, yy), 1/km^2."""
-
-    mean_km: Float[Array, "2 states"]
-    precision: Float[Array, "3 states"]
-
-
 class Start(NamedTuple):
-    """Vague normal prior of the first position."""
+    """Vague normal prior of the first position, the same sd on both axes."""
 
-    mean_km: Float[Array, 2]
+    mean_km: Float[Array, " 2"]
     sd_km: Float[Array, ""]
 
 
@@ -78,7 +77,7 @@ class Track(NamedTuple):
 
 
 class Evaluation(NamedTuple):
-    """The density at one set of states.
+    """The density of the process at one set of states.
 
     `band` holds, for column c of block i, the rows c.. of the lower triangle of the Hessian: the
     layout that LAPACK's banded routines read without a copy. `curvature` is B_i in its three
@@ -100,6 +99,27 @@ class _StepTerms(NamedTuple):
     curvature: tuple[Element, Element, Element]
 
 
+class StepSpread(NamedTuple):
+    """Covariances of the Gaussian approximation, states or steps last.
+
+    `residual` is the covariance of the linearised residual r = z' - J z of each step, `cross` that
+    of r with z. They are kept instead of the covariance of neighbours: where a step is short, z and
+    z' are all but equal and their covariances cannot tell r from rounding.
+    """
+
+    covariance: Float[Array, "dim dim states"]
+    residual: Float[Array, "dim dim steps"]
+    cross: Float[Array, "dim dim steps"]
+
+
+class _StartTerms(NamedTuple):
+    residual: Vector
+    weighted: Vector
+    jacobian: Matrix
+    precision: Sequence[Array]
+    curvature: tuple[Element, Element, Element]
+
+
 FieldRows = tuple[tuple[Array, ...], tuple[Array, ...]]
 
 
@@ -110,44 +130,98 @@ def evaluate(
     z: Float[Array, "dim states"],
     basis: Basis,
     track: Track,
-    sightings: Sightings,
 ) -> Evaluation:
-    """Value, gradient and Hessian of the negative log density, observations included.
+    """Value, gradient and Hessian of the negative log density of the process.
 
     `theta` holds the logarithms of the motion's parameters, then the amplitudes of the velocity
-    field; `basis` is the field's at the states' positions. The constant of the observations is left
-    out (it is added where their scale is known).
+    field; `basis` is the field's at the states' positions. Factors of 2 pi are left out: those of
+    the states cancel in the Laplace approximation.
     """
-    n_motion, dim = len(motion.parameters), z.shape[0]
-    field = _rows(_field(motion, theta, basis, z, 2))
-    terms = _step_terms(motion, theta[:n_motion], *_ends(z), field, track.steps)
-    start_precision = _start_precision(motion, theta[:n_motion], track.start)
-    start_offset = _start_offset(z, track.start)
-    offset = z[:2] - sightings.mean_km
-    xx, xy, yy = sightings.precision
-    pull = jnp.stack([xx * offset[0] + xy * offset[1], xy * offset[0] + yy * offset[1]])
-    value = (
-        _density(terms)
-        + _start_density(start_precision, start_offset)
-        + 0.5 * jnp.sum(offset * pull)
-    )
-    gradient = _process_gradient(terms).at[:2].add(pull)
-    gradient = gradient.at[:, 0].add(start_precision * start_offset)
+    log_parameters, steps = theta[: len(motion.parameters)], z.shape[1] - 1
+    field = _field(motion, theta, basis, z, 2)
+    terms = _step_terms(motion, log_parameters, *_ends(z), _rows(field), track.steps)
+    start = _start_terms(motion, log_parameters, list(z[:, 0]), _first(field), track.start)
+    gradient = _process_gradient(terms, start)
 
     weight_jacobian = product(both_axes(terms.weight), terms.jacobian)
-    steps = z.shape[1] - 1
     diagonal = _pad_end(packed(product(transposed(terms.jacobian), weight_jacobian), steps))
     diagonal = diagonal + _pad_start(packed(both_axes(terms.weight), steps))
+    diagonal = diagonal.at[..., 0].add(_start_information(start))
     curvature = _pad_end(jnp.stack(terms.curvature))
-    information = sightings.precision - curvature
+    curvature = curvature.at[:, 0].add(jnp.stack(_filled(start.curvature)))
     diagonal = diagonal.at[:2, :2].add(
-        jnp.stack([jnp.stack([information[0], information[1]]), information[1:]])
+        -jnp.stack([jnp.stack([curvature[0], curvature[1]]), curvature[1:]])
     )
-    diagonal = diagonal.at[jnp.arange(dim), jnp.arange(dim), 0].add(start_precision)
     off = _pad_end(-packed(transposed(weight_jacobian), steps))
     return Evaluation(
-        value=value, gradient=gradient.T, band=_band(diagonal, off), curvature=curvature.T
+        value=_density(terms) + _start_density(start),
+        gradient=gradient.T,
+        band=_band(diagonal, off),
+        curvature=curvature.T,
     )
+
+
+@partial(jax.jit, static_argnames="motion")
+def step_spread(
+    motion: Motion,
+    theta: Float[Array, " parameters"],
+    z: Float[Array, "dim states"],
+    basis: Basis,
+    track: Track,
+    forward: Float[Array, "states dim 2*dim"],
+    backward: Float[Array, "states dim 2*dim"],
+) -> StepSpread:
+    """Blocks of the inverse Hessian, without a recursion over states.
+
+    `forward` and `backward` are the banded factors of the Hessian and of the reversed Hessian, the
+    latter's states turned back. Their diagonal blocks give the Schur complements Sf_i and Sb_i (see
+    `trackfit.inference.banded.block_covariances`). With the step's own r'Wr taken out, A = Sf_i -
+    J'WJ and D = Sb_(i+1) - W hold what is known of z and z' from both sides, and in the
+    variables (z, r) the joint precision is [[A + J'DJ, J'D], [DJ, D + W]]. With T = inv(D + W):
+
+        V = inv(A + J'(W T D)J),   cov(r, z) = -T D J V,   cov(r) = T + T D J V J'D T.
+
+    The last state's V is inv(Sf).
+    """
+    before = _schur_complements(forward, reverse=False)
+    after = _schur_complements(backward, reverse=True)
+    field = _field(motion, theta, basis, z, 2)
+    log_parameters = theta[: len(motion.parameters)]
+    terms = _step_terms(motion, log_parameters, *_ends(z), _rows(field), track.steps)
+    J, W = terms.jacobian, both_axes(terms.weight)
+    own = product(transposed(J), product(W, J))
+    known_before = _difference([[_part(e, slice(None, -1)) for e in row] for row in before], own)
+    known_after = _difference([[_part(e, slice(1, None)) for e in row] for row in after], W)
+    T = inverse(_sum(known_after, W))
+    pull = product(T, known_after)
+    through = product(product(transposed(J), product(W, pull)), J)
+    V = inverse(symmetric(_sum(known_before, through)))
+    cross = product(product(pull, J), V)
+    residual = _sum(T, product(cross, transposed(product(pull, J))))
+    last = inverse([[_part(e, slice(-1, None)) for e in row] for row in before])
+    steps = z.shape[1] - 1
+    covariance = jnp.concatenate([packed(V, steps), packed(last, 1)], axis=-1)
+    return StepSpread(covariance, packed(symmetric(residual), steps), -packed(cross, steps))
+
+
+def _schur_complements(columns: Array, *, reverse: bool) -> Matrix:
+    """L_ii L_ii' of every block of a banded factor."""
+    dim = columns.shape[1]
+    root: Matrix = [[columns[:, c, r - c] if r >= c else 0 for c in range(dim)] for r in range(dim)]
+    square = product(root, transposed(root))
+    return [row[::-1] for row in square[::-1]] if reverse else square
+
+
+def _part(element: Element, which: slice) -> Element:
+    return 0 if isinstance(element, int) else element[which]
+
+
+def _sum(a: Matrix, b: Matrix) -> Matrix:
+    return [[total((x, y)) for x, y in zip(p, q, strict=True)] for p, q in zip(a, b, strict=True)]
+
+
+def _difference(a: Matrix, b: Matrix) -> Matrix:
+    return [[minus(x, y) for x, y in zip(p, q, strict=True)] for p, q in zip(a, b, strict=True)]
 
 
 @partial(jax.jit, static_argnames="motion")
@@ -157,27 +231,34 @@ def trace_gradient(
     z: Float[Array, "dim states"],
     basis: Basis,
     track: Track,
-    covariance: Float[Array, "dim dim states"],
-    neighbour: Float[Array, "dim dim steps"],
+    spread: StepSpread,
 ) -> Float[Array, "states dim"]:
-    """Gradient in the states of 1/2 <V, H>, with V = inv(H) held (its blocks inside the band).
+    """Gradient in the states of 1/2 <V, H>, with V = inv(H) held.
 
     The basis must hold the derivatives of the velocity up to order three.
     """
+    log_parameters = theta[: len(motion.parameters)]
     field = _field(motion, theta, basis, z, 3)
 
     def half_trace(before: Vector, after: Vector, rows: FieldRows) -> Array:
-        terms = _step_terms(
-            motion, theta[: len(motion.parameters)], before, after, rows, track.steps
-        )
-        return _half_trace(terms, covariance, neighbour)
+        terms = _step_terms(motion, log_parameters, before, after, rows, track.steps)
+        return _half_trace(terms, spread)
 
-    rows = _rows(field[:, : jet_rows(2)])
-    of_before, of_after, of_rows = jax.grad(half_trace, argnums=(0, 1, 2))(*_ends(z), rows)
+    def half_trace_start(first: Vector, rows: FieldRows) -> Array:
+        start = _start_terms(motion, log_parameters, first, rows, track.start)
+        return _half_trace_start(start, spread.covariance[..., 0])
+
+    low = field[:, : jet_rows(2)]
+    of_before, of_after, of_rows = jax.grad(half_trace, argnums=(0, 1, 2))(*_ends(z), _rows(low))
     of_field = jnp.stack([jnp.stack(component) for component in of_rows])
     of_position = shift_gradient(of_field, field[..., :-1])
     of_before = jnp.stack(of_before).at[:2].add(of_position)
-    return (_pad_end(of_before) + _pad_start(jnp.stack(of_after))).T
+    gradient = _pad_end(of_before) + _pad_start(jnp.stack(of_after))
+
+    of_first, of_rows = jax.grad(half_trace_start, argnums=(0, 1))(list(z[:, 0]), _first(low))
+    of_field = jnp.stack([jnp.stack(component) for component in of_rows])
+    of_shift = shift_gradient(of_field[..., None], field[..., :1])[:, 0]
+    return gradient.at[:, 0].add(jnp.stack(of_first).at[:2].add(of_shift)).T
 
 
 @partial(jax.jit, static_argnames="motion")
@@ -187,8 +268,7 @@ def parameter_gradient(
     z: Float[Array, "dim states"],
     basis: Basis,
     track: Track,
-    covariance: Float[Array, "dim dim states"],
-    neighbour: Float[Array, "dim dim steps"],
+    spread: StepSpread,
     adjoint: Float[Array, "dim states"],
 ) -> Float[Array, " parameters"]:
     """Gradient in theta of f + 1/2 <V, H> + adjoint' g, with states, V and adjoint held.
@@ -196,29 +276,31 @@ def parameter_gradient(
     With H adjoint = -gradient(1/2 <V, H>) this is the exact gradient of the Laplace marginal
     likelihood in theta (process part).
     """
-    n_motion, dim = len(motion.parameters), z.shape[0]
-    start_variance = covariance[jnp.arange(dim), jnp.arange(dim), 0]
+    n_motion = len(motion.parameters)
     adjoint_before, adjoint_after = _ends(adjoint)
 
-    def lagrangian(log_parameters: Array, rows: FieldRows) -> Array:
+    def lagrangian(log_parameters: Array, rows: FieldRows, first_rows: FieldRows) -> Array:
         terms = _step_terms(motion, log_parameters, *_ends(z), rows, track.steps)
         moved = apply(terms.jacobian, adjoint_before)
         along = [minus(a, b) for a, b in zip(adjoint_after, moved, strict=True)]
-        precision = _start_precision(motion, log_parameters, track.start)
-        offset = _start_offset(z, track.start)
-        start = _start_density(precision, offset) + jnp.sum(
-            precision * (0.5 * start_variance + adjoint[:, 0] * offset)
-        )
+        start = _start_terms(motion, log_parameters, list(z[:, 0]), first_rows, track.start)
+        along_start = apply(start.jacobian, list(adjoint[:, 0]))
         return (
             _density(terms)
-            + _half_trace(terms, covariance, neighbour)
+            + _half_trace(terms, spread)
             + jnp.sum(dot(along, terms.weighted))
-            + start
+            + _start_density(start)
+            + _half_trace_start(start, spread.covariance[..., 0])
+            + dot(along_start, start.weighted)
         )
 
-    rows = _rows(_field(motion, theta, basis, z, 2))
-    of_motion, of_rows = jax.grad(lagrangian, argnums=(0, 1))(theta[:n_motion], rows)
+    field = _field(motion, theta, basis, z, 2)
+    of_motion, of_rows, of_first = jax.grad(lagrangian, argnums=(0, 1, 2))(
+        theta[:n_motion], _rows(field), _first(field)
+    )
     of_field = _pad_end(jnp.stack([jnp.stack(component) for component in of_rows]))
+    of_first = jnp.stack([jnp.stack(component) for component in of_first])
+    of_field = of_field.at[..., 0].add(of_first)
     return jnp.concatenate([of_motion, amplitude_gradient(of_field, basis)])
 
 
@@ -234,11 +316,10 @@ def gradient_sensitivity(
     n_motion = len(motion.parameters)
 
     def gradient(theta: Array) -> Array:
-        rows = _rows(_field(motion, theta, basis, z, 2))
-        terms = _step_terms(motion, theta[:n_motion], *_ends(z), rows, track.steps)
-        precision = _start_precision(motion, theta[:n_motion], track.start)
-        start = precision * _start_offset(z, track.start)
-        return _process_gradient(terms).at[:, 0].add(start)
+        field = _field(motion, theta, basis, z, 2)
+        terms = _step_terms(motion, theta[:n_motion], *_ends(z), _rows(field), track.steps)
+        start = _start_terms(motion, theta[:n_motion], list(z[:, 0]), _first(field), track.start)
+        return _process_gradient(terms, start)
 
     return jnp.moveaxis(jax.jacfwd(gradient)(theta), 0, 1)
 
@@ -252,6 +333,11 @@ def _field(motion: Motion, theta: Array, basis: Basis, z: Array, order: int) -> 
 def _rows(field: Array) -> FieldRows:
     """The field at the start of every step, as separate vectors."""
     return tuple(field[0, :, :-1]), tuple(field[1, :, :-1])
+
+
+def _first(field: Array) -> FieldRows:
+    """The field at the first state, as separate numbers."""
+    return tuple(field[0, :, 0]), tuple(field[1, :, 0])
 
 
 def _ends(z: Array) -> tuple[Vector, Vector]:
@@ -286,9 +372,64 @@ def _step_terms(
     return _StepTerms(residual, weighted, jacobian, weight, log_det * steps.mask, (xx, xy, yy))
 
 
-def _process_gradient(terms: _StepTerms) -> Array:
+def _start_terms(
+    motion: Motion, log_parameters: Array, first: Vector, field: FieldRows, start: Start
+) -> _StartTerms:
+    """The prior of the first state: position around its mean, velocity around the field."""
+    precision = [p for p in motion.start_precision(log_parameters, start.sd_km) for _ in range(2)]
+    centre = [start.mean_km[0], start.mean_km[1]]
+    one = jnp.ones(())
+    jacobian = both_axes([[one if p == q else 0 for q in range(motion.k)] for p in range(motion.k)])
+    curvature: tuple[Element, Element, Element] = (0, 0, 0)
+    if motion.k == 2:
+        centre += [rows[0] for rows in field]
+        for axis in range(2):
+            for toward in range(2):
+                jacobian[2 + axis][toward] = -field[axis][1 + toward]
+    residual = [z - c for z, c in zip(first, centre, strict=True)]
+    weighted = [p * r for p, r in zip(precision, residual, strict=True)]
+    if motion.k == 2:
+        xx, xy, yy = (
+            weighted[2] * field[0][row] + weighted[3] * field[1][row] for row in range(3, 6)
+        )
+        curvature = (xx, xy, yy)
+    return _StartTerms(residual, weighted, jacobian, precision, curvature)
+
+
+def _start_information(start: _StartTerms) -> Array:
+    """J' P J of the first state."""
+    weighted = [
+        [times(p, e) for e in row] for p, row in zip(start.precision, start.jacobian, strict=True)
+    ]
+    return jnp.stack(
+        [jnp.stack(_filled(row)) for row in product(transposed(start.jacobian), weighted)]
+    )
+
+
+def _filled(elements: Sequence[Element]) -> list[Array]:
+    return [jnp.asarray(element, float) for element in elements]
+
+
+def _start_density(start: _StartTerms) -> Array:
+    log_det = jnp.sum(jnp.log(jnp.stack(start.precision)))
+    return jnp.asarray(0.5 * dot(start.residual, start.weighted) - 0.5 * log_det)
+
+
+def _half_trace_start(start: _StartTerms, covariance: Array) -> Array:
+    """1/2 <V, H> of the start."""
+    V = unpacked(covariance)
+    spread = product(product(start.jacobian, V), transposed(start.jacobian))
+    inner = total(times(p, spread[i][i]) for i, p in enumerate(start.precision))
+    xx, xy, yy = start.curvature
+    bend = total((times(xx, V[0][0]), times(xy, V[0][1] + V[1][0]), times(yy, V[1][1])))
+    return jnp.asarray(0.5 * minus(inner, bend))
+
+
+def _process_gradient(terms: _StepTerms, start: _StartTerms) -> Array:
     back = apply(transposed(terms.jacobian), terms.weighted)
-    return _pad_start(jnp.stack(terms.weighted)) - _pad_end(jnp.stack(back))
+    gradient = _pad_start(jnp.stack(terms.weighted)) - _pad_end(jnp.stack(back))
+    first = apply(transposed(start.jacobian), start.weighted)
+    return gradient.at[:, 0].add(jnp.stack(_filled(first)))
 
 
 def _density(terms: _StepTerms) -> Array:
@@ -296,35 +437,26 @@ def _density(terms: _StepTerms) -> Array:
     return jnp.sum(0.5 * dot(terms.residual, terms.weighted) + terms.log_det)
 
 
-def _half_trace(terms: _StepTerms, covariance: Array, neighbour: Array) -> Array:
-    """1/2 <V, H> of the process: W against the covariance of the linearised residual, less B."""
-    before, after = unpacked(covariance[..., :-1]), unpacked(covariance[..., 1:])
-    spread = product(product(terms.jacobian, before), transposed(terms.jacobian))
-    cross = product(terms.jacobian, unpacked(neighbour))
+def _half_trace(terms: _StepTerms, spread: StepSpread) -> Array:
+    """1/2 <V, H> of the process: W against the covariance of the linearised residual, less B.
+
+    The covariance is that of r - (J - J_0) z, to first order around the J_0 at hand.
+    """
+    V = unpacked(spread.covariance[..., :-1])
+    residual, cross = unpacked(spread.residual), unpacked(spread.cross)
+    change = [[minus(e, jax.lax.stop_gradient(e)) for e in row] for row in terms.jacobian]
+    moved = product(change, transposed(cross))
     k = len(terms.weight)
     parts = []
     for p in range(k):
         for q in range(k):
             for axis in range(2):
                 r, c = 2 * p + axis, 2 * q + axis
-                inner = total((spread[r][c], after[r][c])) - cross[r][c] - cross[c][r]
+                inner = minus(residual[r][c], total((moved[r][c], moved[c][r])))
                 parts.append(times(terms.weight[p][q], inner))
     xx, xy, yy = terms.curvature
-    bend = xx * before[0][0] + xy * (before[0][1] + before[1][0]) + yy * before[1][1]
+    bend = xx * V[0][0] + xy * (V[0][1] + V[1][0]) + yy * V[1][1]
     return 0.5 * jnp.sum(minus(total(parts), bend))
-
-
-def _start_precision(motion: Motion, log_parameters: Array, start: Start) -> Array:
-    per_axis = motion.start_precision(log_parameters, start.sd_km)
-    return jnp.repeat(per_axis, 2)
-
-
-def _start_offset(z: Array, start: Start) -> Array:
-    return z[:, 0].at[:2].add(-start.mean_km)
-
-
-def _start_density(precision: Array, offset: Array) -> Array:
-    return 0.5 * jnp.sum(precision * offset**2) - 0.5 * jnp.sum(jnp.log(precision))
 
 
 def _pad_end(steps: Array) -> Array:

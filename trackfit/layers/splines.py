@@ -47,7 +47,7 @@ class Spline(NamedTuple):
     """
 
     coefficients: Float[Array, "times components ny nx"]
-    origin_km: Float[Array, 2]
+    origin_km: Float[Array, " 2"]
     spacing_km: Float[Array, ""]
 
 

@@ -2,6 +2,7 @@
 
 from trackfit.motion.diffusive import Diffusive
 from trackfit.motion.motion import Motion, MotionParameter, Transition
+from trackfit.motion.persistent import Persistent
 from trackfit.motion.velocity import DistanceTerm, FieldTimes, LayerTerm, VelocityField
 
 __all__ = [
@@ -11,6 +12,7 @@ __all__ = [
     "LayerTerm",
     "Motion",
     "MotionParameter",
+    "Persistent",
     "Transition",
     "VelocityField",
 ]

@@ -7,14 +7,14 @@ arithmetic: reverse differentiation of stacked arrays would pad every slice to f
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 
 import jax.numpy as jnp
 from jaxtyping import Array, Float
 
 Element = Float[Array, " steps"] | int
-Matrix = list[list[Element]]
-Vector = list[Element]
+Vector = Sequence[Element]
+Matrix = Sequence[Sequence[Element]]
 
 
 def is_zero(element: Element) -> bool:
@@ -38,15 +38,17 @@ def times(a: Element, b: Element) -> Element:
 
 def minus(a: Element, b: Element) -> Element:
     """Difference, passing over structural zeros."""
-    return a if is_zero(b) else -b if is_zero(a) else a - b
+    if is_zero(b):
+        return a
+    return -b if is_zero(a) else a - b
 
 
-def transposed(a: Matrix) -> Matrix:
+def transposed(a: Matrix) -> list[list[Element]]:
     """Rows become columns."""
     return [list(column) for column in zip(*a, strict=True)]
 
 
-def product(a: Matrix, b: Matrix) -> Matrix:
+def product(a: Matrix, b: Matrix) -> list[list[Element]]:
     """Matrix product at every step."""
     columns = transposed(b)
     return [[dot(row, column) for column in columns] for row in a]
@@ -57,12 +59,12 @@ def dot(a: Vector, b: Vector) -> Element:
     return total(times(x, y) for x, y in zip(a, b, strict=True))
 
 
-def apply(a: Matrix, v: Vector) -> Vector:
+def apply(a: Matrix, v: Vector) -> list[Element]:
     """Matrix times vector at every step."""
     return [dot(row, v) for row in a]
 
 
-def both_axes(a: Matrix) -> Matrix:
+def both_axes(a: Matrix) -> list[list[Element]]:
     """Kronecker product with the 2 x 2 identity: the same matrix for both axes of the plane."""
     k = len(a)
     return [
@@ -72,7 +74,37 @@ def both_axes(a: Matrix) -> Matrix:
     ]
 
 
-def unpacked(array: Float[Array, "rows columns steps"]) -> Matrix:
+def symmetric(a: Matrix) -> list[list[Element]]:
+    """The upper triangle mirrored: what rounding made unequal is made equal."""
+    return [[a[min(r, c)][max(r, c)] for c in range(len(a))] for r in range(len(a))]
+
+
+def inverse(a: Matrix) -> list[list[Element]]:
+    """Inverses of symmetric positive definite matrices, by halving (Schur complements)."""
+    n = len(a)
+    if n == 1:
+        return [[jnp.reciprocal(a[0][0])]]
+    half = n // 2
+    top = inverse([row[:half] for row in a[:half]])
+    right = [row[half:] for row in a[:half]]
+    across = product(top, right)
+    low = [row[half:] for row in a[half:]]
+    drop = product(transposed(right), across)
+    corner = inverse(
+        [[minus(x, y) for x, y in zip(p, q, strict=True)] for p, q in zip(low, drop, strict=True)]
+    )
+    off = product(across, corner)
+    back = product(off, transposed(across))
+    first = [
+        [total((x, y)) for x, y in zip(p, q, strict=True)] for p, q in zip(top, back, strict=True)
+    ]
+    side = [[minus(0, e) for e in row] for row in off]
+    upper = [p + q for p, q in zip(first, side, strict=True)]
+    lower = [p + q for p, q in zip(transposed(side), corner, strict=True)]
+    return upper + lower
+
+
+def unpacked(array: Float[Array, "rows columns steps"]) -> list[list[Element]]:
     """An array as a matrix of vectors."""
     return [list(row) for row in array]
 

@@ -8,7 +8,7 @@ from typing import ClassVar
 import jax.numpy as jnp
 from jaxtyping import Array, Float
 
-from trackfit.motion.motion import MotionParameter, Transition
+from trackfit.motion.motion import DerivedParameter, MotionParameter, Transition
 
 
 @dataclass(frozen=True)
@@ -21,9 +21,11 @@ class Diffusive:
 
     name: ClassVar[str] = "diffusive"
     k: ClassVar[int] = 1
+    same_moment_hours: ClassVar[float] = 0.5 / 3600.0
     parameters: ClassVar[tuple[MotionParameter, ...]] = (
-        MotionParameter("diffusion", "km/sqrt(h)", prior_median=1.0, prior_log_sd=2.0),
+        MotionParameter("diffusion", "km/sqrt(h)", 0.5, prior_log_sd=2.0, speed_power=1.0),
     )
+    derived: ClassVar[tuple[DerivedParameter, ...]] = ()
 
     def transition(
         self, log_parameters: Float[Array, " parameters"], dt_hours: Float[Array, " steps"]
@@ -39,11 +41,12 @@ class Diffusive:
 
     def start_precision(
         self, log_parameters: Float[Array, " parameters"], position_sd_km: Float[Array, ""]
-    ) -> Float[Array, " k"]:
+    ) -> list[Float[Array, ""]]:
         """Only the position, with its vague prior."""
         del log_parameters
-        return jnp.asarray([position_sd_km**-2.0])
+        return [position_sd_km**-2.0]
 
-    def starting_values(self, speed_scale: float) -> tuple[float, ...]:
+    def starting_values(self, diffusion: float, spacing_hours: float) -> tuple[float, ...]:
         """The diffusion itself."""
-        return (speed_scale,)
+        del spacing_hours
+        return (diffusion,)

@@ -10,7 +10,7 @@ with F (k x k), G (k) and Q (k x k) the same for both axes.
 
 from __future__ import annotations
 
-from typing import ClassVar, NamedTuple, Protocol
+from typing import ClassVar, NamedTuple, Protocol, runtime_checkable
 
 from jaxtyping import Array, Float
 
@@ -31,20 +31,40 @@ class Transition(NamedTuple):
 
 
 class MotionParameter(NamedTuple):
-    """A positive parameter of a motion; the engine works with its logarithm."""
+    """A positive parameter of a motion; the engine works with its logarithm.
+
+    The weak prior's median is `prior_median` at a typical speed of 1 km/h, and goes with the
+    speed to the power `speed_power`.
+    """
 
     name: str
     unit: str
     prior_median: float
     prior_log_sd: float
+    speed_power: float
 
 
+class DerivedParameter(NamedTuple):
+    """A product of powers of a motion's parameters, reported beside them."""
+
+    name: str
+    unit: str
+    powers: tuple[float, ...]
+
+
+@runtime_checkable
 class Motion(Protocol):
-    """A kind of motion. Instances hold no data and are hashable, so that JAX can key on them."""
+    """A kind of motion. Instances hold no data and are hashable, so that JAX can key on them.
+
+    Moments closer than `same_moment_hours` are one: half a second where noise goes as dt, seconds
+    where it goes as dt^3 and the precision of a step as dt^-3.
+    """
 
     name: ClassVar[str]
     k: ClassVar[int]
+    same_moment_hours: ClassVar[float]
     parameters: ClassVar[tuple[MotionParameter, ...]]
+    derived: ClassVar[tuple[DerivedParameter, ...]]
 
     def transition(
         self, log_parameters: Float[Array, " parameters"], dt_hours: Float[Array, " steps"]
@@ -54,10 +74,13 @@ class Motion(Protocol):
 
     def start_precision(
         self, log_parameters: Float[Array, " parameters"], position_sd_km: Float[Array, ""]
-    ) -> Float[Array, " k"]:
-        """Prior precision, per axis, of each quantity of the first state."""
+    ) -> list[Float[Array, ""]]:
+        """Prior precision, per axis, of the first state: position, then velocity less the field."""
         ...
 
-    def starting_values(self, speed_scale: float) -> tuple[float, ...]:
-        """Rough natural values to start a fit from, given a diffusion in km per sqrt(hour)."""
+    def starting_values(self, diffusion: float, spacing_hours: float) -> tuple[float, ...]:
+        """Rough natural values to start a fit from.
+
+        Given a diffusion in km per sqrt(hour) and the typical time between fixes.
+        """
         ...

@@ -62,7 +62,7 @@ class LayerTerm:
 class DistanceTerm:
     """Preference for the distance to a point, in km; a negative amplitude (km/h) pulls to it."""
 
-    point_km: Float[Array, 2]
+    point_km: Float[Array, " 2"]
 
     @property
     def n_amplitudes(self) -> int:

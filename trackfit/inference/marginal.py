@@ -1,0 +1,253 @@
+"""The marginal likelihood of a track at given parameters, normal errors or heavy tails alike."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+from jaxtyping import Float
+
+from trackfit.inference.banded import (
+    Cholesky,
+    NotPositiveDefinite,
+    block_covariances,
+    factor,
+    reversed_band,
+)
+from trackfit.inference.laplace import (
+    DECREMENT_TOLERANCE,
+    Mode,
+    ModeNotFound,
+    Spread,
+    factored,
+    find_mode,
+    line_search,
+    process_gradient,
+    spread_around,
+)
+from trackfit.inference.observations import Sites
+from trackfit.inference.problem import Point, TrackProblem, evaluate_at
+from trackfit.inference.sites import (
+    Cavity,
+    SiteMixer,
+    cavities,
+    log_site_mass,
+    matched_sites,
+    starting_sites,
+    tilted,
+)
+from trackfit.inference.tails import Tilted
+
+MAX_ROUNDS = 60
+SWEEPS_PER_ROUND = 4
+SITE_TOLERANCE = 1e-6
+"""Sites have settled where no marginal moment would move by more than this share of its sd."""
+
+
+@dataclass(frozen=True)
+class Warm:
+    """Where an approximation starts: states, and sites where tails are heavy."""
+
+    states: Float[np.ndarray, "states dim"]
+    sites: Sites | None = None
+
+
+@dataclass(frozen=True)
+class Approximation:
+    """The Gaussian approximation of the states at fixed parameters.
+
+    `cavity` and `moments` exist where tails are heavy.
+    """
+
+    problem: TrackProblem
+    mode: Mode
+    spread_known: Spread | None
+    cavity: Cavity | None
+    moments: Tilted | None
+    sweeps: int
+
+    @property
+    def theta(self) -> Float[np.ndarray, " parameters"]:
+        """The parameters."""
+        return self.mode.theta
+
+    @property
+    def warm(self) -> Warm:
+        """A start for nearby parameters."""
+        return Warm(self.mode.states, self.mode.sites if self.problem.observations.heavy else None)
+
+    @cached_property
+    def spread(self) -> Spread:
+        """Covariance blocks and adjoint at the mode."""
+        if self.spread_known is not None:
+            return self.spread_known
+        mode = self.mode
+        return spread_around(self.problem, mode.theta, mode.point, mode.band, mode.cholesky)
+
+    @property
+    def negative_log_marginal(self) -> float:
+        """-log p(y | theta); factors of 2 pi of the states cancel."""
+        observations = self.problem.observations
+        laplace = (
+            self.mode.point.density(self.problem, self.mode.sites)
+            + 0.5 * self.mode.cholesky.log_det
+        )
+        if self.cavity is None or self.moments is None:
+            return laplace + observations.gaussian_constant(self.theta[-1])
+        correction = self.moments.log_z - log_site_mass(self.mode.sites, self.cavity)
+        return laplace - float(correction.sum())
+
+    def gradient(self) -> Float[np.ndarray, " parameters"]:
+        """Exact gradient of `negative_log_marginal` in all parameters."""
+        observations = self.problem.observations
+        process = process_gradient(self.problem, self.mode, self.spread)
+        if self.moments is not None:
+            errors = [-self.moments.by_log_scale.sum(), -self.moments.by_log_nu.sum()]
+        else:
+            errors = [
+                observations.gaussian_scale_gradient(
+                    self.mode.sites,
+                    self.mode.states,
+                    self.spread.covariance_at(observations.state),
+                    self.spread.adjoint,
+                )
+            ]
+        return np.append(process, errors)
+
+
+def approximate(
+    problem: TrackProblem,
+    theta: Float[np.ndarray, " parameters"],
+    warm: Warm,
+    tolerance: float = DECREMENT_TOLERANCE,
+    site_tolerance: float = SITE_TOLERANCE,
+) -> Approximation:
+    """Approximate the states at fixed parameters: Laplace, with expectation propagation for tails.
+
+    Raises
+    ------
+    ModeNotFound
+        These parameters have no usable approximation; the step that asked for them is rejected.
+    """
+    observations = problem.observations
+    if not observations.heavy:
+        sites = observations.gaussian_sites(theta[-1])
+        mode = find_mode(problem, theta, sites, warm.states, tolerance)
+        return Approximation(problem, mode, None, None, None, 0)
+    return _propagate(problem, theta, warm, tolerance, site_tolerance)
+
+
+@dataclass
+class _Linear:
+    """The process linearised at a point, so that sweeps over the sites need only banded algebra."""
+
+    problem: TrackProblem
+    point: Point
+    adjoint: Float[np.ndarray, "states dim"]
+    exact: bool
+
+    def solved(self, sites: Sites) -> tuple[Cholesky, np.ndarray, np.ndarray, np.ndarray]:
+        """Factor, Newton step, and the moments of e = x - y at the fixes' states."""
+        problem, at = self.problem, self.problem.observations.state
+        band = self.point.band(problem, sites, exact=self.exact)
+        cholesky, backward = factor(band), factor(reversed_band(band))
+        gradient = self.point.full_gradient(problem, sites)
+        step = -cholesky.solve(gradient.reshape(-1)).reshape(gradient.shape)
+        own = self.adjoint[at, :2]
+        mean = problem.observations.offset(self.point.states) + step[at, :2] + own
+        covariance = block_covariances(band, cholesky, backward, at)[:, :2, :2]
+        return cholesky, step, mean, less_square(covariance, own)
+
+
+def less_square(
+    covariance: Float[np.ndarray, "n 2 2"], by: Float[np.ndarray, "n 2"]
+) -> Float[np.ndarray, "n 2 2"]:
+    """V - a a', or V - a a'/(1 + a' inv(V) a) where a is too long for that to be positive."""
+    length = np.einsum("na,nab,nb->n", by, np.linalg.inv(covariance), by)
+    share = np.where(length < 0.5, 1.0, 1.0 / (1.0 + length))
+    return covariance - share[:, None, None] * by[:, :, None] * by[:, None, :]
+
+
+def _propagate(
+    problem: TrackProblem,
+    theta: Float[np.ndarray, " parameters"],
+    warm: Warm,
+    tolerance: float,
+    site_tolerance: float,
+) -> Approximation:
+    """Rounds of: linearise the process; sweep the sites; take the Newton step."""
+    observations = problem.observations
+    log_scale, log_nu = theta[-2:]
+    sites = warm.sites
+    if sites is None:
+        fix_hours = problem.hours[observations.state]
+        sites = starting_sites(observations, fix_hours, log_scale, log_nu)
+    point = evaluate_at(problem, theta, warm.states)
+    if not np.isfinite(point.value):
+        raise ModeNotFound("the density is not finite at the start")
+    sweeps, mixer = 0, SiteMixer()
+    for rounds in range(MAX_ROUNDS):
+        band, cholesky, exact = factored(problem, point, sites)
+        spread = spread_around(problem, theta, point, band, cholesky)
+        linear = _Linear(problem, point, spread.adjoint, exact)
+        for sweep in range(SWEEPS_PER_ROUND):
+            try:
+                _, step, mean, covariance = linear.solved(sites)
+            except NotPositiveDefinite:
+                raise ModeNotFound("the sites leave the Hessian indefinite") from None
+            cavity = cavities(sites, mean, covariance)
+            moments = tilted(observations, cavity, log_scale, log_nu)
+            moved = _moved(moments, mean, covariance, cavity)
+            sweeps += 1
+            gradient = point.full_gradient(problem, sites)
+            decrement = -float(np.sum(gradient * step))
+            if not np.isfinite(moved) or not np.isfinite(decrement):
+                raise ModeNotFound("a site's moments are not finite")
+            if moved < site_tolerance and (sweep > 0 or decrement < tolerance):
+                break
+            wanted = mixer.proposed(sites, matched_sites(sites, cavity, moments), covariance)
+            sites = _kept_positive(problem, point, exact, sites, wanted)
+        if moved < site_tolerance and decrement < tolerance and sweep == 0:
+            if not exact:
+                raise ModeNotFound("the Hessian is indefinite where the gradient vanishes")
+            mode = Mode(theta, point, sites, band, cholesky, rounds)
+            return Approximation(problem, mode, spread, cavity, moments, sweeps)
+        point = _step(problem, theta, sites, point)
+    raise ModeNotFound(f"the sites did not settle in {MAX_ROUNDS} rounds")
+
+
+def _moved(moments: Tilted, mean: np.ndarray, covariance: np.ndarray, cavity: Cavity) -> float:
+    """Largest change that matching would make to a marginal, in shares of its sd."""
+    scale = np.sqrt(np.einsum("kaa->ka", covariance))
+    by_mean = np.abs(moments.mean_km - mean) / scale
+    by_covariance = np.abs(moments.covariance_km2 - covariance) / (
+        scale[:, :, None] * scale[:, None, :]
+    )
+    change = np.maximum(by_mean.max(axis=1), by_covariance.max(axis=(1, 2)))
+    return float(change[cavity.sound].max(initial=0.0))
+
+
+def _kept_positive(
+    problem: TrackProblem, point: Point, exact: bool, sites: Sites, wanted: Sites
+) -> Sites:
+    """The wanted sites, or part of the way to them where the Hessian would not stay positive."""
+    share = 1.0
+    for _ in range(12):
+        trial = sites.mixed(wanted, share)
+        try:
+            factor(point.band(problem, trial, exact=exact))
+        except NotPositiveDefinite:
+            share *= 0.5
+            continue
+        return trial
+    raise ModeNotFound("no change of the sites keeps the Hessian positive definite")
+
+
+def _step(problem: TrackProblem, theta: np.ndarray, sites: Sites, point: Point) -> Point:
+    """One Newton step of the states with the sites held."""
+    _, cholesky, _ = factored(problem, point, sites)
+    gradient = point.full_gradient(problem, sites)
+    step = -cholesky.solve(gradient.reshape(-1)).reshape(gradient.shape)
+    decrement = -float(np.sum(gradient * step))
+    return line_search(problem, theta, sites, point, step, decrement)

@@ -1,0 +1,131 @@
+"""One track laid on its time grid, and the evaluation of its process at given states."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import jax.numpy as jnp
+import numpy as np
+from jaxtyping import Float
+
+from trackfit.inference.banded import Cholesky, NotPositiveDefinite, factor
+from trackfit.inference.observations import Observations, Sites
+from trackfit.inference.process import Evaluation, Track, evaluate
+from trackfit.motion import Motion
+from trackfit.motion.velocity import Basis, evaluate_basis
+
+
+@dataclass(frozen=True)
+class TrackProblem:
+    """One track on its time grid, ready for the engine.
+
+    The parameter vector is [log motion parameters, amplitudes of the field, log error scale], and
+    log nu at the end where errors have heavy tails.
+    """
+
+    motion: Motion
+    track: Track
+    observations: Observations
+    hours: Float[np.ndarray, " states"]
+
+    @property
+    def n_states(self) -> int:
+        """States on the time grid, padding left out."""
+        return len(self.hours)
+
+    @property
+    def padded(self) -> int:
+        """States with padding: the size of all compiled arrays."""
+        return self.track.steps.dt_hours.shape[0] + 1
+
+    @property
+    def dim(self) -> int:
+        """Size of one state."""
+        return 2 * self.motion.k
+
+    @property
+    def n_process(self) -> int:
+        """Parameters of the process: those of the motion, then the amplitudes."""
+        return len(self.motion.parameters) + self.track.field.n_amplitudes
+
+    @property
+    def n_parameters(self) -> int:
+        """Length of the parameter vector."""
+        return self.n_process + self.observations.n_parameters
+
+    def padded_states(self, states: Float[np.ndarray, "states dim"]) -> jnp.ndarray:
+        """States as the compiled functions take them: quantities first, the last one repeated."""
+        extra = self.padded - self.n_states
+        return jnp.asarray(np.pad(states, ((0, extra), (0, 0)), mode="edge").T)
+
+    def basis(self, z: jnp.ndarray, order: int) -> Basis:
+        """The field's basis at padded states; the velocity's derivatives up to `order` (2 or 3)."""
+        return evaluate_basis(self.track.field, self.track.times, z[0], z[1], order)
+
+
+@dataclass(frozen=True)
+class Point:
+    """The process evaluated at some states, without the fixes."""
+
+    states: Float[np.ndarray, "states dim"]
+    value: float
+    gradient: Float[np.ndarray, "states dim"]
+    evaluation: Evaluation
+
+    def density(self, problem: TrackProblem, sites: Sites) -> float:
+        """Negative log density, sites included."""
+        return self.value + problem.observations.value(sites, self.states)
+
+    def full_gradient(self, problem: TrackProblem, sites: Sites) -> Float[np.ndarray, "states dim"]:
+        """Gradient of `density` in the states."""
+        gradient = self.gradient.copy()
+        problem.observations.add_gradient(sites, self.states, gradient)
+        return gradient
+
+    def band(
+        self, problem: TrackProblem, sites: Sites, *, exact: bool = True
+    ) -> Float[np.ndarray, "states dim 2*dim"]:
+        """Hessian of `density`, or the Gauss-Newton one where not `exact`."""
+        band = np.array(self.evaluation.band[: problem.n_states])
+        if not exact:
+            curvature = np.asarray(self.evaluation.curvature)[: problem.n_states]
+            band[:, 0, 0] += curvature[:, 0]
+            band[:, 0, 1] += curvature[:, 1]
+            band[:, 1, 0] += curvature[:, 2]
+        problem.observations.add_information(sites, band)
+        return band
+
+    def factored(
+        self, problem: TrackProblem, sites: Sites
+    ) -> tuple[Float[np.ndarray, "states dim 2*dim"], Cholesky, bool]:
+        """The Hessian and its factor, or else the Gauss-Newton ones; says whether exact.
+
+        Raises
+        ------
+        NotPositiveDefinite
+            Neither has a factor: a number is not finite, or a site's precision is too negative.
+        """
+        band = self.band(problem, sites)
+        try:
+            return band, factor(band), True
+        except NotPositiveDefinite:
+            band = self.band(problem, sites, exact=False)
+            return band, factor(band), False
+
+
+def evaluate_at(
+    problem: TrackProblem,
+    theta: Float[np.ndarray, " parameters"],
+    states: Float[np.ndarray, "states dim"],
+) -> Point:
+    """Evaluate the process at some states."""
+    z = problem.padded_states(states)
+    evaluation = evaluate(
+        problem.motion,
+        jnp.asarray(theta[: problem.n_process]),
+        z,
+        problem.basis(z, order=2),
+        problem.track,
+    )
+    gradient = np.asarray(evaluation.gradient)[: problem.n_states]
+    return Point(states, float(evaluation.value), gradient, evaluation)
