@@ -9,7 +9,7 @@ import numpy as np
 import pandas as pd
 from jaxtyping import Float
 
-from trackfit.frame import Plane, ellipse_from_covariance
+from trackfit.frame import Ellipses, Plane, ellipse_from_covariance, ellipse_scale
 from trackfit.inference.fit import Fit
 from trackfit.inference.grid import nearest_state
 
@@ -83,13 +83,13 @@ def fill_track(
     grid = fit.states.problem.hours
     wanted = np.concatenate([report_hours(grid[0], grid[-1], interval_hours), fix_hours])
     at = np.unique(nearest_state(grid, wanted))
-    xy_km = fit.states.mean[at, :2]
-    covariance = fit.states.total_covariance()[at, :2, :2]
+    xy_km = fit.states.positions_km()[at]
+    covariance = fit.states.position_covariance_km2()[at]
     lon, lat = plane.to_lonlat(xy_km)
     to_ground = np.linalg.inv(plane.ground_to_plane(lon, lat))
     ground_m2 = 1e6 * to_ground @ covariance @ np.swapaxes(to_ground, 1, 2)
-    half = ellipse_from_covariance(ground_m2, 0.50)
-    most = ellipse_from_covariance(ground_m2, 0.95)
+    half = _region(fit, at, ground_m2, 0.50)
+    most = _region(fit, at, ground_m2, 0.95)
     from_fix, width = _around(grid[at], fix_hours)
     table = pd.DataFrame(
         {
@@ -108,6 +108,16 @@ def fill_track(
         }
     )
     return FilledTrack(fit.tag, table, _draws(fit, plane, at, draws, seed))
+
+
+def _region(
+    fit: Fit, at: np.ndarray, ground_m2: Float[np.ndarray, "n 2 2"], probability: float
+) -> Ellipses:
+    """Ellipses that hold a probability, by the size that the posterior has at each state."""
+    assert fit.states is not None
+    plain = ellipse_from_covariance(ground_m2, probability)
+    wider = np.sqrt(fit.states.squared_radius(probability)[at]) / ellipse_scale(probability)
+    return Ellipses(plain.major_m * wider, plain.minor_m * wider, plain.bearing_deg)
 
 
 def _around(

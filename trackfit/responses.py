@@ -80,7 +80,7 @@ def _along_path(fit: Fit, slot: int) -> Float[np.ndarray, " n"]:
     assert fit.states is not None
     term = fit.model.field.terms[slot]
     problem = fit.states.problem
-    x, y = fit.states.mean[:, 0], fit.states.mean[:, 1]
+    x, y = fit.states.positions_km().T
     if not isinstance(term, LayerTerm):
         point = np.asarray(term.point_km)
         return np.hypot(x - point[0], y - point[1])

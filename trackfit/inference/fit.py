@@ -12,15 +12,17 @@ of the exact gradient. It is carried into the states to first order:
 
 from __future__ import annotations
 
+import zlib
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from enum import Enum
 
 import numpy as np
 import pandas as pd
-from jaxtyping import Float
+from jaxtyping import Float, Int
 
 from trackfit.inference.grid import build_problem, interpolated_start, time_grid
+from trackfit.inference.integrate import PathMixture, WeightedPoints, lay_points, normalised
 from trackfit.inference.laplace import ModeNotFound, mode_sensitivity
 from trackfit.inference.marginal import Approximation, Warm, approximate
 from trackfit.inference.optimise import (
@@ -100,27 +102,36 @@ class Model:
 
 @dataclass(frozen=True)
 class FitSettings:
-    """How a track is fitted."""
+    """How a track is fitted.
+
+    `points` is the number of weighted points that stand for the parameters' posterior; zero takes
+    the normal approximation at the mode.
+    """
 
     step_hours: float = 0.5
     coarse_factor: int = 4
     max_iterations: int = 100
     step_check: bool = False
+    points: int = 0
 
 
 @dataclass(frozen=True)
 class States:
     """The states of a fitted track on its time grid.
 
-    `theta` and `theta_covariance` are of the free parameters on the engine's scale; `sensitivity`
-    is the derivative of the states in them.
+    `theta` (the mode) and `theta_covariance` are of the free parameters on the engine's scale;
+    `sensitivity` is the derivative of the states in them. Where weighted points stand for the
+    parameters' posterior, `points` and `mixture` hold them and the positions at each.
     """
 
     approximation: Approximation
     covariance: Float[np.ndarray, "states dim dim"]
     sensitivity: Float[np.ndarray, "states dim free"]
+    free_at: Int[np.ndarray, " free"]
     theta: Float[np.ndarray, " free"]
     theta_covariance: Float[np.ndarray, "free free"]
+    points: WeightedPoints | None = None
+    mixture: PathMixture | None = None
 
     @property
     def problem(self) -> TrackProblem:
@@ -132,21 +143,63 @@ class States:
         """Posterior mean of the states: the mode and its first-order correction."""
         return self.approximation.mode.states + self.approximation.spread.adjoint
 
+    def positions_km(self) -> Float[np.ndarray, "states 2"]:
+        """Posterior mean of the positions, averaged over the parameters."""
+        return self.mean[:, :2] if self.mixture is None else self.mixture.mean()
+
+    def position_covariance_km2(self) -> Float[np.ndarray, "states 2 2"]:
+        """Covariance of the positions, parameter uncertainty included."""
+        if self.mixture is None:
+            return self.total_covariance()[:, :2, :2]
+        return self.mixture.covariance()
+
+    def squared_radius(self, probability: float) -> Float[np.ndarray, " states"]:
+        """Squared Mahalanobis radius of the region of a position that holds a probability."""
+        if self.mixture is None:
+            return np.full(self.problem.n_states, -2.0 * np.log1p(-probability))
+        return self.mixture.squared_radius(probability)
+
     def total_covariance(self) -> Float[np.ndarray, "states dim dim"]:
         """Covariance of the states, parameter uncertainty included."""
         carried = self.sensitivity @ self.theta_covariance
         return self.covariance + carried @ np.swapaxes(self.sensitivity, 1, 2)
 
     def draw(self, count: int, rng: np.random.Generator) -> Float[np.ndarray, "count states dim"]:
-        """Joint draws of the whole path from its Gaussian approximation, parameters included."""
-        shape = self.mean.shape
-        noise = rng.standard_normal((int(np.prod(shape)), count))
-        around = self.approximation.mode.cholesky.solve_transposed_factor(noise).T.reshape(
-            count, *shape
-        )
+        """Joint draws of the whole path, parameters included.
+
+        From the weighted points if there are any: each draw takes a point by its weight, then
+        states from the Gaussian approximation there. Else all from the one at the mode.
+        """
+        if self.points is None:
+            return self._draw_around(self.approximation, count, rng) + self._carried(count, rng)
+        chosen = rng.choice(len(self.points.weight), size=count, p=self.points.weight)
+        draws = np.empty((count, *self.mean.shape))
+        for point in np.unique(chosen):
+            at = np.flatnonzero(chosen == point)
+            found = self._approximation_at(self.points.at[int(point)])
+            draws[at] = self._draw_around(found, len(at), rng)
+        return draws
+
+    def _approximation_at(self, free: Float[np.ndarray, " free"]) -> Approximation:
+        theta = self.approximation.theta.copy()
+        theta[self.free_at] = free
+        return approximate(self.problem, theta, self.approximation.warm)
+
+    def _carried(
+        self, count: int, rng: np.random.Generator
+    ) -> Float[np.ndarray, "count states dim"]:
         root = np.linalg.cholesky(self.theta_covariance)
         theta = rng.standard_normal((count, len(self.theta))) @ root.T
-        return self.mean + around + np.einsum("sdp,cp->csd", self.sensitivity, theta)
+        return np.einsum("sdp,cp->csd", self.sensitivity, theta)
+
+    @staticmethod
+    def _draw_around(
+        found: Approximation, count: int, rng: np.random.Generator
+    ) -> Float[np.ndarray, "count states dim"]:
+        mean = found.mode.states + found.spread.adjoint
+        noise = rng.standard_normal((mean.size, count))
+        around = found.mode.cholesky.solve_transposed_factor(noise).T
+        return mean + around.reshape(count, *mean.shape)
 
 
 @dataclass(frozen=True)
@@ -215,7 +268,7 @@ def fit_track(
         hessian = fine.hessian(found)
     except Rejected:
         return _empty(data, model, settings, FitStatus.NO_MODE)
-    fit = _conclude(data, model, settings, fine, found, hessian)
+    fit = _conclude(data, model, settings, fine, found, hessian, progress)
     if settings.step_check and fit.states is not None:
         progress(0.8, "half the step")
         fit = _with_step_check(fit, data, settings, report_hours, hessian)
@@ -282,10 +335,21 @@ class _Search:
         except ModeNotFound as fault:
             raise Rejected from fault
 
-    def __call__(self, free: Float[np.ndarray, " free"]) -> tuple[float, np.ndarray]:
-        """Negative log posterior of the free parameters and its gradient."""
+    def value(self, free: Float[np.ndarray, " free"]) -> float:
+        """Negative log posterior of the free parameters, up to a constant."""
+        self._refuse_wild(free)
+        with np.errstate(all="ignore"):
+            found = self.at(free)
+        return found.negative_log_marginal + self.parameters.penalty(free)[0]
+
+    def _refuse_wild(self, free: Float[np.ndarray, " free"]) -> None:
+        """No logarithm beyond 50 is worth a try: its exponential is no quantity of this world."""
         if np.abs(free[[p.positive for p in self.parameters.free]]).max(initial=0.0) > 50.0:
             raise Rejected
+
+    def __call__(self, free: Float[np.ndarray, " free"]) -> tuple[float, np.ndarray]:
+        """Negative log posterior of the free parameters and its gradient."""
+        self._refuse_wild(free)
         with np.errstate(all="ignore"):
             found = self.at(free)
             gradient = found.gradient()[self.parameters.free_at]
@@ -335,6 +399,7 @@ def _conclude(
     search: _Search,
     found: Minimum,
     hessian: Float[np.ndarray, "free free"],
+    progress: Progress,
 ) -> Fit:
     problem, free_at = search.problem, model.parameters.free_at
     best = search.at(found.at)
@@ -351,13 +416,16 @@ def _conclude(
         approximation=best,
         covariance=np.moveaxis(np.asarray(blocks), -1, 0)[: problem.n_states],
         sensitivity=mode_sensitivity(problem, best.mode)[..., free_at],
+        free_at=free_at,
         theta=found.at,
         theta_covariance=covariance,
     )
+    if settings.points:
+        states = _with_points(search, states, settings.points, progress)
     return Fit(
         tag=data.tag,
         status=status,
-        parameters=parameter_table(model, found.at, covariance),
+        parameters=parameter_table(model, found.at, covariance, states.points),
         log_marginal=-best.negative_log_marginal,
         n_fixes=len(data.hours),
         n_states=problem.n_states,
@@ -394,42 +462,82 @@ def _with_step_check(
         pass
     sd = np.sqrt(np.diag(fit.states.theta_covariance))
     table = pd.DataFrame({"parameter": [p.name for p in free], "change_in_sd": change / sd})
-    return Fit(**{**fit.__dict__, "step_check": table})
+    return replace(fit, step_check=table)
+
+
+def _with_points(search: _Search, states: States, count: int, progress: Progress) -> States:
+    """Weighted points for the parameters' posterior, with the positions at each."""
+
+    def log_density(free: Float[np.ndarray, " free"]) -> float:
+        return -search.value(free)
+
+    seed = zlib.crc32(states.theta.tobytes())
+    at, log_design = lay_points(log_density, states.theta, states.theta_covariance, count, seed)
+    log_weight, means, covariances = np.full(count, -np.inf), [], []
+    n = states.problem.n_states
+    for i, point in enumerate(at):
+        progress(0.7 + 0.3 * i / count, "weighing parameters")
+        try:
+            log_weight[i] = log_density(point) - log_design[i]
+            found = search.at(point)
+        except Rejected:
+            found = states.approximation
+        means.append((found.mode.states + found.spread.adjoint)[:, :2])
+        blocks = np.asarray(found.spread.steps.covariance)[:2, :2, :n]
+        covariances.append(np.moveaxis(blocks, -1, 0))
+    weight = normalised(log_weight)
+    return replace(
+        states,
+        points=WeightedPoints(at, weight),
+        mixture=PathMixture(weight, np.stack(means), np.stack(covariances)),
+    )
 
 
 def parameter_table(
     model: Model,
     free: Float[np.ndarray, " free"],
     covariance: Float[np.ndarray, "free free"],
+    points: WeightedPoints | None = None,
 ) -> pd.DataFrame:
     """Estimates on the reported scale, with standard deviations and 95 % intervals.
 
-    Intervals are normal on the engine's scale; that of a positive parameter is of its logarithm.
+    From weighted points: posterior means on the engine's scale, turned to the reported one (of a
+    positive parameter its median, nearly), and weighted quantiles. Else the mode, with intervals
+    normal on the engine's scale.
     """
-    full = model.parameters.full(free)
-    wide = np.zeros((len(full), len(full)))
-    wide[np.ix_(model.parameters.free_at, model.parameters.free_at)] = covariance
-    rows = [
-        _row(
-            p.name,
-            p.unit,
-            p.positive,
-            value,
-            wide[i, i] ** 0.5,
-            "fixed" if p.fixed else "estimated",
-        )
-        for i, (p, value) in enumerate(zip(model.parameters.all, full, strict=True))
+    free_at, size = model.parameters.free_at, len(model.parameters.all)
+    names = [
+        (p.name, p.unit, p.positive, np.eye(size)[i], "fixed" if p.fixed else "estimated")
+        for i, p in enumerate(model.parameters.all)
     ]
     for derived in model.motion.derived:
-        powers = np.zeros(len(full))
+        powers = np.zeros(size)
         powers[: len(derived.powers)] = derived.powers
-        spread = float(powers @ wide @ powers) ** 0.5
-        rows.append(_row(derived.name, derived.unit, True, powers @ full, spread, "derived"))
+        names.append((derived.name, derived.unit, True, powers, "derived"))
+    start = model.parameters.full(free)
+    rows = []
+    for name, unit, positive, combination, role in names:
+        along = combination[free_at]
+        value = float(combination @ start)
+        spread = float(np.sqrt(max(along @ covariance @ along, 0.0)))
+        interval = (value - NORMAL_95 * spread, value + NORMAL_95 * spread)
+        if points is not None and along.any():
+            values = value + (points.at - free) @ along
+            value = float(points.weight @ values)
+            spread = float(np.sqrt(points.weight @ (values - value) ** 2))
+            interval = (points.quantile(values, 0.025), points.quantile(values, 0.975))
+        rows.append(_row(name, unit, positive, value, spread, interval, role))
     return pd.DataFrame(rows)
 
 
 def _row(
-    name: str, unit: str, positive: bool, value: float, spread: float, role: str
+    name: str,
+    unit: str,
+    positive: bool,
+    value: float,
+    spread: float,
+    interval: tuple[float, float],
+    role: str,
 ) -> dict[str, object]:
     def natural(x: float) -> float:
         return float(np.exp(x)) if positive else float(x)
@@ -439,8 +547,8 @@ def _row(
         "unit": unit,
         "estimate": natural(value),
         "sd": spread * (natural(value) if positive else 1.0),
-        "lower95": natural(value - NORMAL_95 * spread),
-        "upper95": natural(value + NORMAL_95 * spread),
+        "lower95": natural(interval[0]),
+        "upper95": natural(interval[1]),
         "role": role,
     }
 
