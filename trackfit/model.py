@@ -12,6 +12,7 @@ from jaxtyping import Float
 from trackfit.faults import LayerError
 from trackfit.frame import Plane
 from trackfit.inference.fit import Model, TrackData
+from trackfit.inference.grid import PacePrior
 from trackfit.inference.parameters import Parameter, ParameterSet
 from trackfit.layers.layer import Layer
 from trackfit.layers.splines import Spline, fit_spline
@@ -128,10 +129,18 @@ def build_model(study: Study, layers: Mapping[str, Layer], plane: Plane) -> Stud
                 )
             ),
             heavy=study.errors.tails == "heavy",
+            pace=_pace_prior(study),
         ),
         names=tuple(names),
         standards=standards,
     )
+
+
+def _pace_prior(study: Study) -> PacePrior | None:
+    motion = study.motion
+    if motion.pace_log_sd == 0.0:
+        return None
+    return PacePrior(motion.pace_log_sd, motion.pace_hours, 2.0 * motion.pace_hours)
 
 
 def _layer_term(preference: Preference, spline: Spline, standard: Standard) -> LayerTerm:

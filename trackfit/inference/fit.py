@@ -21,7 +21,7 @@ import numpy as np
 import pandas as pd
 from jaxtyping import Float, Int
 
-from trackfit.inference.grid import build_problem, interpolated_start, time_grid
+from trackfit.inference.grid import PacePrior, build_problem, interpolated_start, time_grid
 from trackfit.inference.integrate import PathMixture, WeightedPoints, lay_points, normalised
 from trackfit.inference.laplace import ModeNotFound, mode_sensitivity
 from trackfit.inference.marginal import Approximation, Warm, approximate
@@ -88,7 +88,9 @@ class TrackData:
 class Model:
     """What is fitted to a track: motion, velocity field with its layers, parameters, errors.
 
-    `heavy` errors are bivariate Student-t, normal ones else. `start` is the prior of the first
+    `heavy` errors are bivariate Student-t, normal ones else. `pace` lets the motion's pace vary in
+    time; its spells are further parameters, added when a track's length is known. `start` is the
+    prior of the first
     position, vague around the first fix if None.
     """
 
@@ -97,6 +99,7 @@ class Model:
     layers: tuple[tuple[Layer | None, ...], Layer | None]
     parameters: ParameterSet
     heavy: bool = False
+    pace: PacePrior | None = None
     start: Start | None = None
 
 
@@ -172,11 +175,12 @@ class States:
         """
         if self.points is None:
             return self._draw_around(self.approximation, count, rng) + self._carried(count, rng)
-        chosen = rng.choice(len(self.points.weight), size=count, p=self.points.weight)
+        points = self.points.at
+        chosen = rng.choice(len(points), size=count, p=self.points.weight)
         draws = np.empty((count, *self.mean.shape))
         for point in np.unique(chosen):
             at = np.flatnonzero(chosen == point)
-            found = self._approximation_at(self.points.at[int(point)])
+            found = self._approximation_at(points[point])
             draws[at] = self._draw_around(found, len(at), rng)
         return draws
 
@@ -254,15 +258,15 @@ def fit_track(
     if len(data.hours) < MIN_FIXES:
         return _empty(data, model, settings, FitStatus.TOO_FEW_FIXES)
     coarse_step = settings.step_hours * settings.coarse_factor
-    start = np.array([p.start for p in model.parameters.free])
-    metric = np.diag([p.reach**-2.0 for p in model.parameters.free])
+    fine = _Search(data, model, settings.step_hours, report_hours)
+    free = fine.parameters.free
+    start = np.array([p.start for p in free])
+    metric = np.diag([p.reach**-2.0 for p in free])
     try:
         if settings.coarse_factor > 1:
             coarse = _Search(data, model, coarse_step, np.zeros(0))
             found = coarse.run(start, metric, settings.max_iterations, _part(progress, 0.0, 0.3))
-            start = found.at
-            metric = coarse.metric(found)
-        fine = _Search(data, model, settings.step_hours, report_hours)
+            start, metric = found.at, coarse.metric(found)
         found = fine.run(start, metric, settings.max_iterations, _part(progress, 0.3, 0.6))
         progress(0.6, "uncertainty")
         hessian = fine.hessian(found)
@@ -296,7 +300,6 @@ class _Search:
         report_hours: Float[np.ndarray, " n"],
     ) -> None:
         hours = time_grid(data.hours, step_hours, report_hours, model.motion.same_moment_hours)
-        self.parameters = model.parameters
         self.problem = build_problem(
             motion=model.motion,
             field=model.field,
@@ -307,7 +310,10 @@ class _Search:
             covariance_km2=data.covariance_km2,
             start=model.start,
             heavy=model.heavy,
+            pace=model.pace,
         )
+        spells = 0 if self.problem.pace is None else self.problem.pace.spells
+        self.parameters = model.parameters.with_spells(spells)
         states = interpolated_start(
             hours, data.hours, data.at_km, self.problem.dim, robust=model.heavy
         )
@@ -401,14 +407,15 @@ def _conclude(
     hessian: Float[np.ndarray, "free free"],
     progress: Progress,
 ) -> Fit:
-    problem, free_at = search.problem, model.parameters.free_at
+    problem, parameters = search.problem, search.parameters
+    free_at = parameters.free_at
     best = search.at(found.at)
     status = FitStatus.CONVERGED if found.converged else FitStatus.NOT_CONVERGED
     try:
         np.linalg.cholesky(hessian)
     except np.linalg.LinAlgError:
         status = FitStatus.NOT_IDENTIFIED if found.converged else status
-        floor = np.array([p.reach**-2.0 for p in model.parameters.free])
+        floor = np.array([p.reach**-2.0 for p in parameters.free])
         hessian = nearest_positive(hessian, floor)
     covariance = np.linalg.inv(hessian)
     blocks = best.spread.steps.covariance
@@ -425,7 +432,7 @@ def _conclude(
     return Fit(
         tag=data.tag,
         status=status,
-        parameters=parameter_table(model, found.at, covariance, states.points),
+        parameters=parameter_table(parameters, model.motion, found.at, covariance, states.points),
         log_marginal=-best.negative_log_marginal,
         n_fixes=len(data.hours),
         n_states=problem.n_states,
@@ -448,7 +455,7 @@ def _with_step_check(
     """Refit at half the step, from the estimates, and report each parameter's change."""
     assert fit.states is not None
     search = _Search(data, fit.model, 0.5 * settings.step_hours, report_hours)
-    free = fit.model.parameters.free
+    free = search.parameters.free
     floor = np.array([p.reach**-2.0 for p in free])
     metric = nearest_positive(hessian, floor)
     change = np.full(len(free), np.nan)
@@ -494,7 +501,8 @@ def _with_points(search: _Search, states: States, count: int, progress: Progress
 
 
 def parameter_table(
-    model: Model,
+    parameters: ParameterSet,
+    motion: Motion,
     free: Float[np.ndarray, " free"],
     covariance: Float[np.ndarray, "free free"],
     points: WeightedPoints | None = None,
@@ -505,16 +513,17 @@ def parameter_table(
     positive parameter its median, nearly), and weighted quantiles. Else the mode, with intervals
     normal on the engine's scale.
     """
-    free_at, size = model.parameters.free_at, len(model.parameters.all)
+    free_at, size = parameters.free_at, len(parameters.all)
     names = [
         (p.name, p.unit, p.positive, np.eye(size)[i], "fixed" if p.fixed else "estimated")
-        for i, p in enumerate(model.parameters.all)
+        for i, p in enumerate(parameters.all)
+        if p.reported
     ]
-    for derived in model.motion.derived:
+    for derived in motion.derived:
         powers = np.zeros(size)
         powers[: len(derived.powers)] = derived.powers
         names.append((derived.name, derived.unit, True, powers, "derived"))
-    start = model.parameters.full(free)
+    start = parameters.full(free)
     rows = []
     for name, unit, positive, combination, role in names:
         along = combination[free_at]
@@ -555,7 +564,8 @@ def _row(
 
 def _empty(data: TrackData, model: Model, settings: FitSettings, status: FitStatus) -> Fit:
     free = np.array([p.start for p in model.parameters.free])
-    table = parameter_table(model, free, np.zeros((len(free), len(free))))
+    nothing_known = np.zeros((len(free), len(free)))
+    table = parameter_table(model.parameters, model.motion, free, nothing_known)
     table.loc[table["role"] != "fixed", ["estimate", "sd", "lower95", "upper95"]] = np.nan
     return Fit(
         tag=data.tag,

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import jax.numpy as jnp
 import numpy as np
-from jaxtyping import Float
+from jaxtyping import Float, Int
 
 from trackfit.inference.observations import Observations
-from trackfit.inference.problem import TrackProblem
+from trackfit.inference.problem import Pace, TrackProblem
 from trackfit.inference.process import Start, Steps, Track
 from trackfit.inference.sites import neighbour_medians
 from trackfit.layers.layer import Layer
@@ -19,6 +21,25 @@ CROWDED_SHARE = 0.1
 
 START_SD_KM = 1000.0
 """Prior sd of the first position around the first fix: vague at the scale of any study."""
+
+
+@dataclass(frozen=True)
+class PacePrior:
+    """How the pace of a motion varies: log pace is normal around zero, constant within a spell.
+
+    Attributes
+    ----------
+    log_sd
+        Standard deviation of the logarithm of the pace.
+    spell_hours
+        Length of a spell.
+    alike_hours
+        Time over which the correlation of log paces falls to 1/e.
+    """
+
+    log_sd: float
+    spell_hours: float
+    alike_hours: float
 
 
 def time_grid(
@@ -93,6 +114,7 @@ def build_problem(
     covariance_km2: Float[np.ndarray, "fixes 2 2"],
     start: Start | None = None,
     heavy: bool = False,
+    pace: PacePrior | None = None,
 ) -> TrackProblem:
     """Lay one track on its time grid.
 
@@ -104,6 +126,8 @@ def build_problem(
         Prior of the first position; by default normal around the first fix, sd `START_SD_KM`.
     heavy
         Errors are bivariate Student-t.
+    pace
+        How much the pace of the motion varies; None keeps it the same.
     """
     padded = padded_size(len(hours))
     extra = padded - len(hours)
@@ -112,14 +136,33 @@ def build_problem(
     mask = np.pad(np.ones(len(hours) - 1), (0, extra))
     if start is None:
         start = Start(jnp.asarray(fix_km[np.argmin(fix_hours)]), jnp.asarray(START_SD_KM))
+    spell, spells = _spells(hours, pace)
     track = Track(
         field=field,
         times=_field_times(layers, padded_hours),
-        steps=Steps(jnp.asarray(dt), jnp.asarray(mask)),
+        steps=Steps(jnp.asarray(dt), jnp.asarray(mask), jnp.asarray(_padded_spells(spell, padded))),
         start=start,
     )
     observations = Observations(nearest_state(hours, fix_hours), fix_km, covariance_km2, heavy)
-    return TrackProblem(motion, track, observations, hours)
+    return TrackProblem(motion, track, observations, hours, spells)
+
+
+def _spells(
+    hours: Float[np.ndarray, " states"], pace: PacePrior | None
+) -> tuple[Int[np.ndarray, " steps"], Pace | None]:
+    """The spell of every step, and the spells' prior."""
+    if pace is None:
+        return np.zeros(len(hours) - 1, dtype=int), None
+    middle = 0.5 * (hours[1:] + hours[:-1]) - hours[0]
+    count = max(1, int(np.ceil((hours[-1] - hours[0]) / pace.spell_hours)))
+    spell = np.minimum((middle / pace.spell_hours).astype(int), count - 1)
+    apart = np.abs(np.subtract.outer(np.arange(count), np.arange(count))) * pace.spell_hours
+    covariance = pace.log_sd**2 * np.exp(-apart / pace.alike_hours)
+    return spell, Pace(np.linalg.cholesky(covariance))
+
+
+def _padded_spells(spell: Int[np.ndarray, " steps"], padded: int) -> Int[np.ndarray, " n"]:
+    return np.pad(spell, (0, padded - 1 - len(spell))).astype(np.int32)
 
 
 def _field_times(

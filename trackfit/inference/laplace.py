@@ -26,6 +26,7 @@ from trackfit.inference.banded import Cholesky, NotPositiveDefinite, factor, rev
 from trackfit.inference.observations import Sites
 from trackfit.inference.problem import Point, TrackProblem, evaluate_at
 from trackfit.inference.process import (
+    ProcessParameters,
     StepSpread,
     gradient_sensitivity,
     parameter_gradient,
@@ -153,7 +154,7 @@ def spread_around(
         raise ModeNotFound("the Hessian cannot be factored in reverse") from None
     z = problem.padded_states(point.states)
     basis = problem.basis(z, order=3)
-    common = (problem.motion, jnp.asarray(theta[: problem.n_process]), z, basis, problem.track)
+    common = (problem.motion, problem.process_parameters(theta), z, basis, problem.track)
     columns = cholesky.storage.T.reshape(band.shape)
     columns_back = backward.storage.T.reshape(band.shape)[::-1]
     steps = step_spread(*common, _padded(problem, columns), _padded(problem, columns_back))
@@ -171,22 +172,18 @@ def _padded(problem: TrackProblem, columns: Float[np.ndarray, "states dim width"
     return jnp.asarray(np.concatenate([columns, fill]))
 
 
-def process_gradient(
-    problem: TrackProblem, mode: Mode, spread: Spread
-) -> Float[np.ndarray, " process"]:
+def process_gradient(problem: TrackProblem, mode: Mode, spread: Spread) -> ProcessParameters:
     """Gradient of the Laplace marginal likelihood (negative log) in the process parameters."""
     z = problem.padded_states(mode.states)
     adjoint = jnp.zeros_like(z).at[:, : problem.n_states].set(spread.adjoint.T)
-    return np.asarray(
-        parameter_gradient(
-            problem.motion,
-            jnp.asarray(mode.theta[: problem.n_process]),
-            z,
-            problem.basis(z, order=2),
-            problem.track,
-            spread.steps,
-            adjoint,
-        )
+    return parameter_gradient(
+        problem.motion,
+        problem.process_parameters(mode.theta),
+        z,
+        problem.basis(z, order=2),
+        problem.track,
+        spread.steps,
+        adjoint,
     )
 
 
@@ -198,16 +195,22 @@ def mode_sensitivity(
     Sites of heavy-tailed errors are held.
     """
     z = problem.padded_states(mode.states)
-    process = gradient_sensitivity(
-        problem.motion,
-        jnp.asarray(mode.theta[: problem.n_process]),
-        z,
-        problem.basis(z, order=2),
-        problem.track,
+    process = np.asarray(
+        gradient_sensitivity(
+            problem.motion,
+            problem.process_parameters(mode.theta),
+            z,
+            problem.basis(z, order=2),
+            problem.track,
+        )
     )
     slope = np.zeros((problem.n_states, problem.dim, problem.n_parameters))
-    slope[..., : problem.n_process] = np.asarray(process)[: problem.n_states]
+    slope[..., : problem.n_process] = process[: problem.n_states, :, : problem.n_process]
+    if problem.pace is not None:
+        by_pace = process[: problem.n_states, :, problem.n_process :]
+        slope[..., -problem.pace.spells :] = by_pace @ problem.pace.root
     if not problem.observations.heavy:
-        slope[:, :2, -1] = problem.observations.scale_sensitivity(mode.sites, mode.states)
+        by_scale = problem.observations.scale_sensitivity(mode.sites, mode.states)
+        slope[:, :2, problem.n_process] = by_scale
     flat = slope.reshape(problem.n_states * problem.dim, -1)
     return -mode.cholesky.solve(flat).reshape(slope.shape)

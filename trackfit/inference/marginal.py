@@ -94,7 +94,9 @@ class Approximation:
             + 0.5 * self.mode.cholesky.log_det
         )
         if self.cavity is None or self.moments is None:
-            return laplace + observations.gaussian_constant(self.theta[-1])
+            return laplace + observations.gaussian_constant(
+                self.problem.error_parameters(self.theta)[0]
+            )
         correction = self.moments.log_z - log_site_mass(self.mode.sites, self.cavity)
         return laplace - float(correction.sum())
 
@@ -113,7 +115,7 @@ class Approximation:
                     self.spread.adjoint,
                 )
             ]
-        return np.append(process, errors)
+        return self.problem.whole_gradient(process, np.array(errors))
 
 
 def approximate(
@@ -132,7 +134,7 @@ def approximate(
     """
     observations = problem.observations
     if not observations.heavy:
-        sites = observations.gaussian_sites(theta[-1])
+        sites = observations.gaussian_sites(problem.error_parameters(theta)[0])
         mode = find_mode(problem, theta, sites, warm.states, tolerance)
         return Approximation(problem, mode, None, None, None, 0)
     return _propagate(problem, theta, warm, tolerance, site_tolerance)
@@ -178,7 +180,7 @@ def _propagate(
 ) -> Approximation:
     """Rounds of: linearise the process; sweep the sites; take the Newton step."""
     observations = problem.observations
-    log_scale, log_nu = theta[-2:]
+    log_scale, log_nu = problem.error_parameters(theta)
     sites = warm.sites
     if sites is None:
         fix_hours = problem.hours[observations.state]

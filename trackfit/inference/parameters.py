@@ -16,7 +16,8 @@ class Parameter:
     logarithm. The prior is normal on the engine's scale; an infinite sd means none. A fixed
     parameter keeps its start.
 
-    `reach` is the longest change the search makes in one step.
+    `reach` is the longest change the search makes in one step; one that is not `reported` has no
+    row in the table of parameters.
     """
 
     name: str
@@ -27,6 +28,7 @@ class Parameter:
     prior_sd: float
     reach: float
     fixed: bool = False
+    reported: bool = True
 
 
 @dataclass(frozen=True)
@@ -57,3 +59,11 @@ class ParameterSet:
         precision = np.array([p.prior_sd**-2.0 for p in self.free])
         offset = free - mean
         return 0.5 * float(np.sum(precision * offset**2)), precision * offset
+
+    def with_spells(self, count: int) -> ParameterSet:
+        """The set with one standard normal number a spell at its end, if there are none yet."""
+        spells = tuple(
+            Parameter(f"spell_{i + 1}", "1", False, 0.0, 0.0, 1.0, 1.0, reported=False)
+            for i in range(count)
+        )
+        return self if self.all[-count:] == spells else ParameterSet(self.all + spells)

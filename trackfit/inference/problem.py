@@ -10,23 +10,39 @@ from jaxtyping import Float
 
 from trackfit.inference.banded import Cholesky, NotPositiveDefinite, factor
 from trackfit.inference.observations import Observations, Sites
-from trackfit.inference.process import Evaluation, Track, evaluate
+from trackfit.inference.process import Evaluation, ProcessParameters, Track, evaluate
 from trackfit.motion import Motion
 from trackfit.motion.velocity import Basis, evaluate_basis
+
+
+@dataclass(frozen=True)
+class Pace:
+    """A pace that varies: spells of equal length whose log paces are normal and alike when near.
+
+    `root` is a square root of their prior covariance: log pace = root u with u standard normal.
+    """
+
+    root: Float[np.ndarray, "spells spells"]
+
+    @property
+    def spells(self) -> int:
+        """Number of spells."""
+        return len(self.root)
 
 
 @dataclass(frozen=True)
 class TrackProblem:
     """One track on its time grid, ready for the engine.
 
-    The parameter vector is [log motion parameters, amplitudes of the field, log error scale], and
-    log nu at the end where errors have heavy tails.
+    The parameter vector is [log motion parameters, amplitudes of the field, log error scale, log
+    nu where errors have heavy tails, one standard normal number a spell where the pace varies].
     """
 
     motion: Motion
     track: Track
     observations: Observations
     hours: Float[np.ndarray, " states"]
+    pace: Pace | None = None
 
     @property
     def n_states(self) -> int:
@@ -51,7 +67,33 @@ class TrackProblem:
     @property
     def n_parameters(self) -> int:
         """Length of the parameter vector."""
-        return self.n_process + self.observations.n_parameters
+        spells = 0 if self.pace is None else self.pace.spells
+        return self.n_process + self.observations.n_parameters + spells
+
+    def error_parameters(
+        self, theta: Float[np.ndarray, " parameters"]
+    ) -> Float[np.ndarray, " errors"]:
+        """Log error scale, and log nu where errors have heavy tails."""
+        return theta[self.n_process : self.n_process + self.observations.n_parameters]
+
+    def process_parameters(self, theta: Float[np.ndarray, " parameters"]) -> ProcessParameters:
+        """The process's share of the parameter vector."""
+        n_motion = len(self.motion.parameters)
+        log_pace = None
+        if self.pace is not None:
+            log_pace = jnp.asarray(self.pace.root @ theta[-self.pace.spells :])
+        return ProcessParameters(
+            jnp.asarray(theta[:n_motion]), jnp.asarray(theta[n_motion : self.n_process]), log_pace
+        )
+
+    def whole_gradient(
+        self, process: ProcessParameters, errors: Float[np.ndarray, " errors"]
+    ) -> Float[np.ndarray, " parameters"]:
+        """Gradients of process and errors put together in the order of the parameter vector."""
+        parts = [np.asarray(process.log_motion), np.asarray(process.amplitudes), errors]
+        if self.pace is not None:
+            parts.append(self.pace.root.T @ np.asarray(process.log_pace))
+        return np.concatenate(parts)
 
     def padded_states(self, states: Float[np.ndarray, "states dim"]) -> jnp.ndarray:
         """States as the compiled functions take them: quantities first, the last one repeated."""
@@ -122,7 +164,7 @@ def evaluate_at(
     z = problem.padded_states(states)
     evaluation = evaluate(
         problem.motion,
-        jnp.asarray(theta[: problem.n_process]),
+        problem.process_parameters(theta),
         z,
         problem.basis(z, order=2),
         problem.track,

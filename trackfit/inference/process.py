@@ -27,7 +27,7 @@ from typing import NamedTuple
 
 import jax
 import jax.numpy as jnp
-from jaxtyping import Array, Float
+from jaxtyping import Array, Float, Int
 
 from trackfit.layers.splines import jet_rows
 from trackfit.motion import FieldTimes, Motion, VelocityField
@@ -54,10 +54,24 @@ LOG_2PI = 1.8378770664093453
 
 
 class Steps(NamedTuple):
-    """The time grid: step lengths, and one for a real step or zero for padding."""
+    """The time grid: step lengths, one for a real step or zero for padding, and each step's spell.
+
+    A spell is a stretch of time with a pace of its own: its noise is exp(pace) times the motion's.
+    """
 
     dt_hours: Float[Array, " steps"]
     mask: Float[Array, " steps"]
+    spell: Int[Array, " steps"]
+
+
+class ProcessParameters(NamedTuple):
+    """Parameters of the process: logarithms of the motion's, amplitudes of the velocity field, and
+    the logarithm of the pace of each spell (None where the pace does not vary).
+    """
+
+    log_motion: Float[Array, " motion"]
+    amplitudes: Float[Array, " amplitudes"]
+    log_pace: Float[Array, " spells"] | None = None
 
 
 class Start(NamedTuple):
@@ -126,21 +140,20 @@ FieldRows = tuple[tuple[Array, ...], tuple[Array, ...]]
 @partial(jax.jit, static_argnames="motion")
 def evaluate(
     motion: Motion,
-    theta: Float[Array, " parameters"],
+    theta: ProcessParameters,
     z: Float[Array, "dim states"],
     basis: Basis,
     track: Track,
 ) -> Evaluation:
     """Value, gradient and Hessian of the negative log density of the process.
 
-    `theta` holds the logarithms of the motion's parameters, then the amplitudes of the velocity
-    field; `basis` is the field's at the states' positions. Factors of 2 pi are left out: those of
-    the states cancel in the Laplace approximation.
+    `basis` is the field's at the states' positions. Factors of 2 pi are left out: those of the
+    states cancel in the Laplace approximation.
     """
-    log_parameters, steps = theta[: len(motion.parameters)], z.shape[1] - 1
-    field = _field(motion, theta, basis, z, 2)
-    terms = _step_terms(motion, log_parameters, *_ends(z), _rows(field), track.steps)
-    start = _start_terms(motion, log_parameters, list(z[:, 0]), _first(field), track.start)
+    steps = z.shape[1] - 1
+    field = _field(theta, basis, z, 2)
+    terms = _step_terms(motion, theta, *_ends(z), _rows(field), track.steps)
+    start = _start_terms(motion, theta, list(z[:, 0]), _first(field), track)
     gradient = _process_gradient(terms, start)
 
     weight_jacobian = product(both_axes(terms.weight), terms.jacobian)
@@ -164,7 +177,7 @@ def evaluate(
 @partial(jax.jit, static_argnames="motion")
 def step_spread(
     motion: Motion,
-    theta: Float[Array, " parameters"],
+    theta: ProcessParameters,
     z: Float[Array, "dim states"],
     basis: Basis,
     track: Track,
@@ -185,9 +198,8 @@ def step_spread(
     """
     before = _schur_complements(forward, reverse=False)
     after = _schur_complements(backward, reverse=True)
-    field = _field(motion, theta, basis, z, 2)
-    log_parameters = theta[: len(motion.parameters)]
-    terms = _step_terms(motion, log_parameters, *_ends(z), _rows(field), track.steps)
+    field = _field(theta, basis, z, 2)
+    terms = _step_terms(motion, theta, *_ends(z), _rows(field), track.steps)
     J, W = terms.jacobian, both_axes(terms.weight)
     own = product(transposed(J), product(W, J))
     known_before = _difference([[_part(e, slice(None, -1)) for e in row] for row in before], own)
@@ -227,7 +239,7 @@ def _difference(a: Matrix, b: Matrix) -> Matrix:
 @partial(jax.jit, static_argnames="motion")
 def trace_gradient(
     motion: Motion,
-    theta: Float[Array, " parameters"],
+    theta: ProcessParameters,
     z: Float[Array, "dim states"],
     basis: Basis,
     track: Track,
@@ -237,15 +249,14 @@ def trace_gradient(
 
     The basis must hold the derivatives of the velocity up to order three.
     """
-    log_parameters = theta[: len(motion.parameters)]
-    field = _field(motion, theta, basis, z, 3)
+    field = _field(theta, basis, z, 3)
 
     def half_trace(before: Vector, after: Vector, rows: FieldRows) -> Array:
-        terms = _step_terms(motion, log_parameters, before, after, rows, track.steps)
+        terms = _step_terms(motion, theta, before, after, rows, track.steps)
         return _half_trace(terms, spread)
 
     def half_trace_start(first: Vector, rows: FieldRows) -> Array:
-        start = _start_terms(motion, log_parameters, first, rows, track.start)
+        start = _start_terms(motion, theta, first, rows, track)
         return _half_trace_start(start, spread.covariance[..., 0])
 
     low = field[:, : jet_rows(2)]
@@ -264,26 +275,25 @@ def trace_gradient(
 @partial(jax.jit, static_argnames="motion")
 def parameter_gradient(
     motion: Motion,
-    theta: Float[Array, " parameters"],
+    theta: ProcessParameters,
     z: Float[Array, "dim states"],
     basis: Basis,
     track: Track,
     spread: StepSpread,
     adjoint: Float[Array, "dim states"],
-) -> Float[Array, " parameters"]:
+) -> ProcessParameters:
     """Gradient in theta of f + 1/2 <V, H> + adjoint' g, with states, V and adjoint held.
 
     With H adjoint = -gradient(1/2 <V, H>) this is the exact gradient of the Laplace marginal
     likelihood in theta (process part).
     """
-    n_motion = len(motion.parameters)
     adjoint_before, adjoint_after = _ends(adjoint)
 
-    def lagrangian(log_parameters: Array, rows: FieldRows, first_rows: FieldRows) -> Array:
-        terms = _step_terms(motion, log_parameters, *_ends(z), rows, track.steps)
+    def lagrangian(theta: ProcessParameters, rows: FieldRows, first_rows: FieldRows) -> Array:
+        terms = _step_terms(motion, theta, *_ends(z), rows, track.steps)
         moved = apply(terms.jacobian, adjoint_before)
         along = [minus(a, b) for a, b in zip(adjoint_after, moved, strict=True)]
-        start = _start_terms(motion, log_parameters, list(z[:, 0]), first_rows, track.start)
+        start = _start_terms(motion, theta, list(z[:, 0]), first_rows, track)
         along_start = apply(start.jacobian, list(adjoint[:, 0]))
         return (
             _density(terms)
@@ -294,39 +304,76 @@ def parameter_gradient(
             + dot(along_start, start.weighted)
         )
 
-    field = _field(motion, theta, basis, z, 2)
-    of_motion, of_rows, of_first = jax.grad(lagrangian, argnums=(0, 1, 2))(
-        theta[:n_motion], _rows(field), _first(field)
+    field = _field(theta, basis, z, 2)
+    of_theta, of_rows, of_first = jax.grad(lagrangian, argnums=(0, 1, 2))(
+        theta, _rows(field), _first(field)
     )
     of_field = _pad_end(jnp.stack([jnp.stack(component) for component in of_rows]))
     of_first = jnp.stack([jnp.stack(component) for component in of_first])
     of_field = of_field.at[..., 0].add(of_first)
-    return jnp.concatenate([of_motion, amplitude_gradient(of_field, basis)])
+    return of_theta._replace(amplitudes=amplitude_gradient(of_field, basis))
 
 
 @partial(jax.jit, static_argnames="motion")
 def gradient_sensitivity(
     motion: Motion,
-    theta: Float[Array, " parameters"],
+    theta: ProcessParameters,
     z: Float[Array, "dim states"],
     basis: Basis,
     track: Track,
 ) -> Float[Array, "states dim parameters"]:
     """Derivative in theta of the gradient in the states (process part), states held."""
-    n_motion = len(motion.parameters)
 
-    def gradient(theta: Array) -> Array:
-        field = _field(motion, theta, basis, z, 2)
-        terms = _step_terms(motion, theta[:n_motion], *_ends(z), _rows(field), track.steps)
-        start = _start_terms(motion, theta[:n_motion], list(z[:, 0]), _first(field), track.start)
+    def gradient(theta: ProcessParameters) -> Array:
+        field = _field(theta, basis, z, 2)
+        terms = _step_terms(motion, theta, *_ends(z), _rows(field), track.steps)
+        start = _start_terms(motion, theta, list(z[:, 0]), _first(field), track)
         return _process_gradient(terms, start)
 
-    return jnp.moveaxis(jax.jacfwd(gradient)(theta), 0, 1)
+    parts = [part for part in jax.jacfwd(gradient)(theta) if part is not None]
+    return jnp.moveaxis(jnp.concatenate(parts, axis=-1), 0, 1)
 
 
-def _field(motion: Motion, theta: Array, basis: Basis, z: Array, order: int) -> Array:
+class LinearSteps(NamedTuple):
+    """The process linearised at given states z: z' = J z + noise of covariance inv(W), steps last.
+
+    `residual` is r at z. The first state is N(z_0 - inv(P) g, inv(P)) with P = `start_precision`
+    and g = `start_gradient`.
+    """
+
+    residual: Float[Array, "dim steps"]
+    jacobian: Float[Array, "dim dim steps"]
+    weight: Float[Array, "dim dim steps"]
+    start_gradient: Float[Array, " dim"]
+    start_precision: Float[Array, "dim dim"]
+
+
+@partial(jax.jit, static_argnames="motion")
+def linear_steps(
+    motion: Motion,
+    theta: ProcessParameters,
+    z: Float[Array, "dim states"],
+    basis: Basis,
+    track: Track,
+) -> LinearSteps:
+    """Linearise every step and the start at the states."""
+    steps = z.shape[1] - 1
+    field = _field(theta, basis, z, 2)
+    terms = _step_terms(motion, theta, *_ends(z), _rows(field), track.steps)
+    start = _start_terms(motion, theta, list(z[:, 0]), _first(field), track)
+    gradient = apply(transposed(start.jacobian), start.weighted)
+    return LinearSteps(
+        residual=jnp.stack(terms.residual),
+        jacobian=packed(terms.jacobian, steps),
+        weight=packed(both_axes(terms.weight), steps),
+        start_gradient=jnp.stack(_filled(gradient)),
+        start_precision=_start_information(start),
+    )
+
+
+def _field(theta: ProcessParameters, basis: Basis, z: Array, order: int) -> Array:
     """The velocity field's rows at the states; kept whole so that they are computed once."""
-    rows = velocity_jet(theta[len(motion.parameters) :], basis, z.shape[1], order)
+    rows = velocity_jet(theta.amplitudes, basis, z.shape[1], order)
     return jax.lax.optimization_barrier(rows)
 
 
@@ -347,15 +394,18 @@ def _ends(z: Array) -> tuple[Vector, Vector]:
 
 def _step_terms(
     motion: Motion,
-    log_parameters: Array,
+    theta: ProcessParameters,
     before: Vector,
     after: Vector,
     field: FieldRows,
     steps: Steps,
 ) -> _StepTerms:
     k = motion.k
-    F, G, W, log_det = motion.transition(log_parameters, steps.dt_hours)
-    weight: Matrix = [[times(element, steps.mask) for element in row] for row in W]
+    F, G, W, log_det = motion.transition(theta.log_motion, steps.dt_hours)
+    pace = jnp.zeros(()) if theta.log_pace is None else theta.log_pace[steps.spell]
+    calm = steps.mask * jnp.exp(-2.0 * pace)
+    log_det = log_det + 2.0 * k * pace
+    weight: Matrix = [[times(element, calm) for element in row] for row in W]
     velocity = [rows[0] for rows in field]
     drift = [G[p] * velocity[axis] for p in range(k) for axis in range(2)]
     carried = apply(both_axes(F), before)
@@ -373,10 +423,14 @@ def _step_terms(
 
 
 def _start_terms(
-    motion: Motion, log_parameters: Array, first: Vector, field: FieldRows, start: Start
+    motion: Motion, theta: ProcessParameters, first: Vector, field: FieldRows, track: Track
 ) -> _StartTerms:
     """The prior of the first state: position around its mean, velocity around the field."""
-    precision = [p for p in motion.start_precision(log_parameters, start.sd_km) for _ in range(2)]
+    start = track.start
+    position, *velocity = motion.start_precision(theta.log_motion, start.sd_km)
+    if theta.log_pace is not None:
+        velocity = [p * jnp.exp(-2.0 * theta.log_pace[track.steps.spell[0]]) for p in velocity]
+    precision = [p for p in (position, *velocity) for _ in range(2)]
     centre = [start.mean_km[0], start.mean_km[1]]
     one = jnp.ones(())
     jacobian = both_axes([[one if p == q else 0 for q in range(motion.k)] for p in range(motion.k)])
