@@ -19,9 +19,8 @@ of tries stays where it was, which leaves the target as it is too.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Protocol
+from typing import NamedTuple, Protocol
 
 import numpy as np
 from jaxtyping import Bool, Float, Int
@@ -48,14 +47,31 @@ class Bounds(Protocol):
 
 @dataclass
 class Paths:
-    """Paths on the way to the target: each one's own centre, and its deviation from it.
+    """Paths on the way to the target.
 
-    `held` tells whether the first and the last state stay where they are.
+    Attributes
+    ----------
+    bands
+        Precisions of the Gaussians, block tridiagonal in banded storage.
+    group
+        Which Gaussian each path is of.
+    centre, deviation
+        What each path is drawn around, and its deviation from that.
+    held
+        Whether the first and the last state stay where they are.
     """
 
+    bands: Float[np.ndarray, "groups states dim 2*dim"]
+    group: Int[np.ndarray, " paths"]
     centre: Float[np.ndarray, "paths states dim"]
     deviation: Float[np.ndarray, "paths states dim"]
     held: tuple[bool, bool]
+
+    def some(self, rows: Int[np.ndarray, " some"]) -> Paths:
+        """A copy of some of the paths."""
+        return Paths(
+            self.bands, self.group[rows], self.centre[rows], self.deviation[rows], self.held
+        )
 
     @property
     def xy_km(self) -> Float[np.ndarray, "paths states 2"]:
@@ -70,43 +86,59 @@ class Paths:
         return bounds.clear(start, end).reshape(paths, states - 1)
 
 
-@dataclass(frozen=True)
-class Conditional:
-    """Some components of a block tridiagonal Gaussian given the others, which are held."""
-
+class _Part(NamedTuple):
+    rows: Int[np.ndarray, " some"]
     band: Float[np.ndarray, "states dim 2*dim"]
-    held: Bool[np.ndarray, " size"]
     cholesky: Cholesky
 
+
+@dataclass(frozen=True)
+class Conditional:
+    """Some components of the paths given the others, which are held."""
+
+    held: Bool[np.ndarray, "states dim"]
+    parts: tuple[_Part, ...]
+
     @classmethod
-    def on(
-        cls, band: Float[np.ndarray, "states dim 2*dim"], held: Bool[np.ndarray, "states dim"]
-    ) -> Conditional:
-        """Factor the precision of the free components; held ones get a one on the diagonal."""
-        flat = band.reshape(-1, band.shape[2]).copy()
-        fixed = held.ravel()
-        flat[fixed] = 0.0
-        flat[fixed, 0] = 1.0
-        for below in range(1, flat.shape[1]):
-            flat[: len(flat) - below, below][fixed[below:]] = 0.0
-        return cls(band, fixed, factor(flat.reshape(band.shape)))
+    def of(cls, paths: Paths, held: Bool[np.ndarray, "states dim"]) -> Conditional:
+        """Factor the precisions of the free components."""
+        parts = []
+        for group in np.unique(paths.group):
+            band = paths.bands[group]
+            rows = np.flatnonzero(paths.group == group)
+            parts.append(_Part(rows, band, factor(_with_held(band, held))))
+        return cls(held, tuple(parts))
 
     def mean(
         self, deviation: Float[np.ndarray, "paths states dim"]
     ) -> Float[np.ndarray, "paths states dim"]:
         """Mean of the free deviations given the held ones, which are returned as they are."""
-        held = deviation.reshape(len(deviation), -1) * self.held
-        push = _times_band(self.band, held)
-        push[:, self.held] = 0.0
-        return (held - self.cholesky.solve(push.T).T).reshape(deviation.shape)
+        kept = (deviation * self.held).reshape(len(deviation), -1)
+        for part in self.parts:
+            push = _times_band(part.band, kept[part.rows])
+            push[:, self.held.ravel()] = 0.0
+            kept[part.rows] -= part.cholesky.solve(push.T).T
+        return kept.reshape(deviation.shape)
 
     def noise(self, paths: int, rng: np.random.Generator) -> Float[np.ndarray, "paths states dim"]:
         """Fresh draws around the conditional mean; zero where held."""
-        white = rng.standard_normal((paths, len(self.held)))
-        white[:, self.held] = 0.0
-        return self.cholesky.solve_transposed_factor(white.T).T.reshape(
-            paths, *self.band.shape[:2]
-        )
+        white = rng.standard_normal((paths, *self.held.shape)) * ~self.held
+        flat = white.reshape(paths, -1)
+        for part in self.parts:
+            flat[part.rows] = part.cholesky.solve_transposed_factor(flat[part.rows].T).T
+        return white
+
+
+def _with_held(
+    band: Float[np.ndarray, "states dim 2*dim"], held: Bool[np.ndarray, "states dim"]
+) -> Float[np.ndarray, "states dim 2*dim"]:
+    """The precision of the free components; held ones stand alone with a one on the diagonal."""
+    flat, fixed = band.reshape(-1, band.shape[2]).copy(), held.ravel()
+    flat[fixed] = 0.0
+    flat[fixed, 0] = 1.0
+    for below in range(1, min(flat.shape[1], len(flat))):
+        flat[: len(flat) - below, below][fixed[below:]] = 0.0
+    return flat.reshape(band.shape)
 
 
 def _times_band(
@@ -144,8 +176,9 @@ class _Layout:
     def blocks(self) -> int:
         return int(self.block[-1]) + 1
 
-    def conditional(self, band: Float[np.ndarray, "states dim 2*dim"]) -> Conditional:
-        return Conditional.on(band, np.repeat(self.held[:, None], band.shape[1], axis=1))
+    def conditional(self, paths: Paths) -> Conditional:
+        dim = paths.centre.shape[2]
+        return Conditional.of(paths, np.repeat(self.held[:, None], dim, axis=1))
 
 
 def block_lengths(states: int) -> list[int]:
@@ -155,7 +188,6 @@ def block_lengths(states: int) -> list[int]:
 
 def sweep(
     paths: Paths,
-    band: Float[np.ndarray, "states dim 2*dim"],
     bounds: Bounds,
     rng: np.random.Generator,
     twin: Float[np.ndarray, "paths states dim"] | None = None,
@@ -165,10 +197,10 @@ def sweep(
     `twin` holds deviations of unconfined paths, which are moved by the same random numbers: where
     bounds do not matter they stay close to the paths, and their law is known.
     """
-    states = band.shape[0]
+    states = paths.centre.shape[1]
     for length in block_lengths(states):
         layout = _Layout.drawn(states, length, paths.held, rng)
-        given = layout.conditional(band)
+        given = layout.conditional(paths)
         noise = given.noise(len(paths.deviation), rng)
         angle = rng.uniform(0.0, 2.0 * np.pi, (len(noise), layout.blocks))
         if twin is not None:
@@ -246,7 +278,6 @@ def _block_weight(
 
 def mend(
     paths: Paths,
-    band: Float[np.ndarray, "states dim 2*dim"],
     bounds: Bounds,
     rng: np.random.Generator,
 ) -> None:
@@ -255,14 +286,14 @@ def mend(
     A new draw is taken where fewer of its block's steps offend. This only finds a start for
     `sweep`.
     """
-    states = band.shape[0]
+    states = paths.centre.shape[1]
     for length in [n for n in block_lengths(states) for _ in range(2)] * MEND_ROUNDS:
         rows = np.flatnonzero(~paths.clear(bounds).all(axis=1))
         if not rows.size:
             return
         layout = _Layout.drawn(states, length, paths.held, rng)
-        given = layout.conditional(band)
-        part = Paths(paths.centre[rows], paths.deviation[rows], paths.held)
+        part = paths.some(rows)
+        given = layout.conditional(part)
         trial = given.mean(part.deviation) + given.noise(len(rows), rng)
         everywhere = np.ones((len(rows), layout.blocks), bool)
         before = _bad_steps(part, part.deviation, bounds, layout, everywhere)
@@ -271,15 +302,10 @@ def mend(
         paths.deviation[rows] = np.where(taken, trial, part.deviation)
 
 
-def put_through(
-    paths: Paths,
-    band: Float[np.ndarray, "states dim 2*dim"],
-    rows: Sequence[int],
-    xy_km: Float[np.ndarray, "rows states 2"],
-) -> None:
-    """Give some paths these positions, and what else a state holds its mean given them; in place."""
-    held = np.zeros(band.shape[:2], bool)
+def put_through(paths: Paths, row: int, xy_km: Float[np.ndarray, "states 2"]) -> None:
+    """Give a path these positions, and what else a state holds its mean given them; in place."""
+    part = paths.some(np.array([row]))
+    part.deviation[0, :, :2] = xy_km - part.centre[0, :, :2]
+    held = np.zeros(part.centre.shape[1:], bool)
     held[:, :2] = True
-    deviation = paths.deviation[rows]
-    deviation[..., :2] = xy_km - paths.centre[rows][..., :2]
-    paths.deviation[rows] = Conditional.on(band, held).mean(deviation)
+    paths.deviation[row] = Conditional.of(part, held).mean(part.deviation)[0]

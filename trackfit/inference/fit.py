@@ -119,6 +119,25 @@ class FitSettings:
 
 
 @dataclass(frozen=True)
+class Drawn:
+    """Draws of the whole path from one Gaussian.
+
+    `rows` numbers them among all draws; `band` is the Gaussian's precision in banded storage;
+    `centre` is what each is drawn around.
+    """
+
+    rows: Int[np.ndarray, " some"]
+    band: Float[np.ndarray, "states dim 2*dim"]
+    centre: Float[np.ndarray, "some states dim"]
+    paths: Float[np.ndarray, "some states dim"]
+
+
+def _centre(found: Approximation) -> Float[np.ndarray, "states dim"]:
+    """Posterior mean of the states at fixed parameters, to first order."""
+    return found.mode.states + found.spread.adjoint
+
+
+@dataclass(frozen=True)
 class States:
     """The states of a fitted track on its time grid.
 
@@ -144,7 +163,7 @@ class States:
     @property
     def mean(self) -> Float[np.ndarray, "states dim"]:
         """Posterior mean of the states: the mode and its first-order correction."""
-        return self.approximation.mode.states + self.approximation.spread.adjoint
+        return _centre(self.approximation)
 
     def positions_km(self) -> Float[np.ndarray, "states 2"]:
         """Posterior mean of the positions, averaged over the parameters."""
@@ -168,21 +187,41 @@ class States:
         return self.covariance + carried @ np.swapaxes(self.sensitivity, 1, 2)
 
     def draw(self, count: int, rng: np.random.Generator) -> Float[np.ndarray, "count states dim"]:
-        """Joint draws of the whole path, parameters included.
+        """Joint draws of the whole path, parameters included."""
+        draws = np.empty((count, *self.mean.shape))
+        for part in self.drawn(count, rng):
+            draws[part.rows] = part.paths
+        return draws
+
+    def drawn(
+        self, count: int, rng: np.random.Generator, most_points: int | None = None
+    ) -> list[Drawn]:
+        """Joint draws of the whole path, by the Gaussians they come from.
 
         From the weighted points if there are any: each draw takes a point by its weight, then
-        states from the Gaussian approximation there. Else all from the one at the mode.
+        states from the Gaussian approximation there. Else all from the one at the mode. With
+        `most_points` the draws share so few points, taken evenly by their weights.
         """
         if self.points is None:
-            return self._draw_around(self.approximation, count, rng) + self._carried(count, rng)
-        points = self.points.at
-        chosen = rng.choice(len(points), size=count, p=self.points.weight)
-        draws = np.empty((count, *self.mean.shape))
+            around = self._draw_around(self.approximation, count, rng)
+            carried = self._carried(count, rng)
+            band, centre = self.approximation.mode.band, self.mean + carried
+            return [Drawn(np.arange(count), band, centre, around + carried)]
+        points, weight = self.points.at, self.points.weight
+        if most_points is None:
+            chosen = rng.choice(len(points), size=count, p=weight)
+        else:
+            even = (rng.random() + np.arange(most_points)) / most_points
+            taken = np.searchsorted(np.cumsum(weight), even * weight.sum() * (1.0 - 1e-12))
+            chosen = np.resize(taken, count)
+        parts = []
         for point in np.unique(chosen):
             at = np.flatnonzero(chosen == point)
             found = self._approximation_at(points[point])
-            draws[at] = self._draw_around(found, len(at), rng)
-        return draws
+            centre = np.broadcast_to(_centre(found), (len(at), *self.mean.shape))
+            paths = self._draw_around(found, len(at), rng)
+            parts.append(Drawn(at, found.mode.band, centre, paths))
+        return parts
 
     def _approximation_at(self, free: Float[np.ndarray, " free"]) -> Approximation:
         theta = self.approximation.theta.copy()
@@ -200,7 +239,7 @@ class States:
     def _draw_around(
         found: Approximation, count: int, rng: np.random.Generator
     ) -> Float[np.ndarray, "count states dim"]:
-        mean = found.mode.states + found.spread.adjoint
+        mean = _centre(found)
         noise = rng.standard_normal((mean.size, count))
         around = found.mode.cholesky.solve_transposed_factor(noise).T
         return mean + around.reshape(count, *mean.shape)

@@ -152,9 +152,8 @@ def spread_around(
         backward = factor(reversed_band(band))
     except NotPositiveDefinite:
         raise ModeNotFound("the Hessian cannot be factored in reverse") from None
-    z = problem.padded_states(point.states)
-    basis = problem.basis(z, order=3)
-    common = (problem.motion, problem.process_parameters(theta), z, basis, problem.track)
+    process = problem.process_parameters(theta)
+    common = (problem.motion, process, point.z, point.basis, problem.track)
     columns = cholesky.storage.T.reshape(band.shape)
     columns_back = backward.storage.T.reshape(band.shape)[::-1]
     steps = step_spread(*common, _padded(problem, columns), _padded(problem, columns_back))
@@ -174,13 +173,12 @@ def _padded(problem: TrackProblem, columns: Float[np.ndarray, "states dim width"
 
 def process_gradient(problem: TrackProblem, mode: Mode, spread: Spread) -> ProcessParameters:
     """Gradient of the Laplace marginal likelihood (negative log) in the process parameters."""
-    z = problem.padded_states(mode.states)
-    adjoint = jnp.zeros_like(z).at[:, : problem.n_states].set(spread.adjoint.T)
+    adjoint = jnp.zeros_like(mode.point.z).at[:, : problem.n_states].set(spread.adjoint.T)
     return parameter_gradient(
         problem.motion,
         problem.process_parameters(mode.theta),
-        z,
-        problem.basis(z, order=2),
+        mode.point.z,
+        mode.point.basis,
         problem.track,
         spread.steps,
         adjoint,
@@ -194,13 +192,12 @@ def mode_sensitivity(
 
     Sites of heavy-tailed errors are held.
     """
-    z = problem.padded_states(mode.states)
     process = np.asarray(
         gradient_sensitivity(
             problem.motion,
             problem.process_parameters(mode.theta),
-            z,
-            problem.basis(z, order=2),
+            mode.point.z,
+            mode.point.basis,
             problem.track,
         )
     )

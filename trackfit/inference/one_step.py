@@ -13,8 +13,9 @@ import numpy as np
 from jaxtyping import Float
 
 from trackfit.inference.marginal import Approximation
-from trackfit.inference.predicted import Predicted
+from trackfit.inference.predicted import Predicted, error_mixture
 from trackfit.inference.process import linear_steps
+from trackfit.inference.sites import determinant, inverse_2x2
 
 
 class OneStepAhead(Predicted):
@@ -24,8 +25,8 @@ class OneStepAhead(Predicted):
 def one_step_ahead(found: Approximation) -> OneStepAhead:
     """Predict every fix from the earlier ones at the parameters of an approximation.
 
-    Fixes of one moment are taken in their order. Heavy-tailed errors pass through the filter as the
-    sites of the approximation.
+    Fixes of one moment are taken in their order. With heavy tails the filter keeps the first two
+    moments after each fix (assumed density filtering; Maybeck 1982, chapter 12).
     """
     observations = found.problem.observations
     errors = found.problem.error_parameters(found.theta)
@@ -43,12 +44,15 @@ def _filtered(
 ) -> tuple[Float[np.ndarray, "fixes 2"], Float[np.ndarray, "fixes 2 2"]]:
     """Reported less predicted position, and the covariance of the prediction, for every fix.
 
-    The filter runs in deviations d from the fitted states, so that nothing is lost to rounding.
+    The filter runs in deviations from the fitted states, so that nothing is lost to rounding.
     """
     problem, states = found.problem, found.mode.states
-    observations, sites = problem.observations, found.mode.sites
+    observations = problem.observations
+    errors = problem.error_parameters(found.theta)
+    error_km2 = observations.covariance_km2 * np.exp(2.0 * errors[0])
+    weights, log_mass = error_mixture(float(errors[1]) if observations.heavy else None)
     jacobian, residual, noise, mean, spread = _linearised(found)
-    offset, covariance = np.empty_like(observations.at_km), np.empty_like(sites.precision)
+    offset, covariance = np.empty_like(observations.at_km), np.empty_like(error_km2)
     order = np.argsort(observations.state, kind="stable")
     at = np.searchsorted(observations.state[order], np.arange(problem.n_states + 1))
     for i in range(problem.n_states):
@@ -56,16 +60,36 @@ def _filtered(
             mean = jacobian[i - 1] @ mean - residual[i - 1]
             spread = jacobian[i - 1] @ spread @ jacobian[i - 1].T + noise[i - 1]
         for k in order[at[i] : at[i + 1]]:
-            apart = states[i, :2] + mean[:2] - observations.at_km[k]
-            offset[k], covariance[k] = -apart, spread[:2, :2]
-            precision = sites.precision[k]
-            # inv(1 + L P) L and inv(1 + L P) times the site's pull: no inverse of a weak site
-            right = np.column_stack([precision, sites.pull[k] - precision @ apart])
-            gain = np.linalg.solve(np.eye(2) + precision @ spread[:2, :2], right)
-            mean = mean + spread[:, :2] @ gain[:, 2]
-            spread = spread - spread[:, :2] @ gain[:, :2] @ spread[:2]
+            offset[k] = observations.at_km[k] - states[i, :2] - mean[:2]
+            covariance[k] = spread[:2, :2]
+            gain, less = _update(offset[k], covariance[k], error_km2[k], weights, log_mass)
+            across = spread[:, :2]
+            mean = mean + across @ gain
+            spread = spread - across @ less @ across.T
             spread = 0.5 * (spread + spread.T)
     return offset, covariance
+
+
+def _update(
+    offset_km: Float[np.ndarray, " 2"],
+    covariance_km2: Float[np.ndarray, "2 2"],
+    error_km2: Float[np.ndarray, "2 2"],
+    weights: Float[np.ndarray, " nodes"],
+    log_mass: Float[np.ndarray, " nodes"],
+) -> tuple[Float[np.ndarray, " 2"], Float[np.ndarray, "2 2"]]:
+    """G and D of the update: mean + P g and covariance - P D P', P the covariance with x.
+
+    At weight w the precision of the innovation is A_w = inv(V + s^2 C / w), g_w = A_w r and D_w =
+    A_w. The mixture's first two moments have g = <g_w> and D = <A_w> - cov(g_w).
+    """
+    precision = inverse_2x2(covariance_km2 + error_km2 / weights[:, None, None])
+    pulls = precision @ offset_km
+    log_share = log_mass + 0.5 * np.log(determinant(precision)) - 0.5 * pulls @ offset_km
+    share = np.exp(log_share - log_share.max())
+    share /= share.sum()
+    gain = share @ pulls
+    apart = pulls - gain
+    return gain, np.einsum("w,wab->ab", share, precision) - (share[:, None] * apart).T @ apart
 
 
 def _linearised(

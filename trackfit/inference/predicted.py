@@ -66,10 +66,7 @@ class Predicted:
         log_nu
             Logarithm of the tails' degrees of freedom; None for normal errors.
         """
-        if log_nu is None:
-            weights, log_mass = np.ones(1), np.zeros(1)
-        else:
-            weights, log_mass = np.exp(LOG_WEIGHTS), _log_mass(log_nu)
+        weights, log_mass = error_mixture(log_nu)
         misfit = np.empty((len(offset_km), len(weights)))
         log_density = np.empty_like(misfit)
         for j, weight in enumerate(weights):
@@ -87,15 +84,23 @@ class Predicted:
         )
 
 
-def _log_mass(log_nu: float) -> Float[np.ndarray, " nodes"]:
-    """Log of the quadrature weights of w ~ Gamma(nu/2, nu/2) at the nodes in log w."""
+def error_mixture(
+    log_nu: float | None,
+) -> tuple[Float[np.ndarray, " nodes"], Float[np.ndarray, " nodes"]]:
+    """Weights w at which errors are N(0, s^2 C / w), and the logarithms of their masses.
+
+    Quadrature nodes in log w of w ~ Gamma(nu/2, nu/2); one weight of one for normal errors.
+    """
+    if log_nu is None:
+        return np.ones(1), np.zeros(1)
     half = 0.5 * np.exp(log_nu)
-    return (
+    log_mass = (
         np.log(LOG_WEIGHT_STEP)
         + half * np.log(half)
         - gammaln(half)
         + half * (LOG_WEIGHTS - np.exp(LOG_WEIGHTS))
     )
+    return np.exp(LOG_WEIGHTS), log_mass
 
 
 def _residuals(

@@ -14,6 +14,9 @@ from trackfit.inference.process import Evaluation, ProcessParameters, Track, eva
 from trackfit.motion import Motion
 from trackfit.motion.velocity import Basis, evaluate_basis
 
+VELOCITY_ORDER = 3
+"""Derivatives of the velocity in a basis: two for the Hessian, one more to differentiate that."""
+
 
 @dataclass(frozen=True)
 class Pace:
@@ -100,19 +103,21 @@ class TrackProblem:
         extra = self.padded - self.n_states
         return jnp.asarray(np.pad(states, ((0, extra), (0, 0)), mode="edge").T)
 
-    def basis(self, z: jnp.ndarray, order: int) -> Basis:
-        """The field's basis at padded states; the velocity's derivatives up to `order` (2 or 3)."""
-        return evaluate_basis(self.track.field, self.track.times, z[0], z[1], order)
-
 
 @dataclass(frozen=True)
 class Point:
-    """The process evaluated at some states, without the fixes."""
+    """The process evaluated at some states, without the fixes.
+
+    `z` are the states as compiled functions take them; `basis` is the field's there, with the
+    velocity's derivatives up to order three.
+    """
 
     states: Float[np.ndarray, "states dim"]
     value: float
     gradient: Float[np.ndarray, "states dim"]
     evaluation: Evaluation
+    z: jnp.ndarray
+    basis: Basis
 
     def density(self, problem: TrackProblem, sites: Sites) -> float:
         """Negative log density, sites included."""
@@ -162,12 +167,13 @@ def evaluate_at(
 ) -> Point:
     """Evaluate the process at some states."""
     z = problem.padded_states(states)
+    basis = evaluate_basis(problem.track.field, problem.track.times, z[0], z[1], VELOCITY_ORDER)
     evaluation = evaluate(
         problem.motion,
         problem.process_parameters(theta),
         z,
-        problem.basis(z, order=2),
+        basis,
         problem.track,
     )
     gradient = np.asarray(evaluation.gradient)[: problem.n_states]
-    return Point(states, float(evaluation.value), gradient, evaluation)
+    return Point(states, float(evaluation.value), gradient, evaluation, z, basis)

@@ -65,8 +65,10 @@ class Steps(NamedTuple):
 
 
 class ProcessParameters(NamedTuple):
-    """Parameters of the process: logarithms of the motion's, amplitudes of the velocity field, and
-    the logarithm of the pace of each spell (None where the pace does not vary).
+    """Parameters of the process.
+
+    Logarithms of the motion's, amplitudes of the velocity field, and the logarithm of the pace of
+    each spell (None where the pace does not vary).
     """
 
     log_motion: Float[Array, " motion"]

@@ -1,19 +1,22 @@
-"""C2 cubic B-splines of gridded layers and their partial derivatives, vectorised in JAX.
+"""Quintic B-splines of gridded layers and their partial derivatives, vectorised in JAX.
 
-A layer f on a square grid with spacing s is the tensor product of uniform cubic B-splines B that
+A layer f on a square grid with spacing s is the tensor product of uniform quintic B-splines B that
 interpolates its nodes (de Boor, *A Practical Guide to Splines*, 1978; coefficients by the recursive
 filter of Unser, Aldroubi & Eden, IEEE Trans. Signal Process. 41:821, 1993, through scipy.ndimage):
 
     f(x, y) = sum_ij c_ij B((x - x0)/s - j) B((y - y0)/s - i)
 
 The engine needs the *jet* of f: all partial derivatives up to order four at many points. Orders one
-to three make the drift, its Jacobian and its Hessian; order four (piecewise, since f is C2) carries
-their derivatives when the marginal likelihood is differentiated through the mode.
+to three make the drift, its Jacobian and its Hessian; order four carries their derivatives when the
+marginal likelihood is differentiated through the mode. All are continuous: with cubic splines the
+third derivatives jump from cell to cell, the likelihood jumps with them, and one fit in six on
+tracks like the demonstration's did not settle.
 """
 
 from __future__ import annotations
 
 from functools import partial
+from math import comb, factorial
 from typing import NamedTuple
 
 import jax
@@ -33,13 +36,40 @@ JET_ORDERS: tuple[tuple[int, int], ...] = tuple(
 JET_ROW: dict[tuple[int, int], int] = {orders: row for row, orders in enumerate(JET_ORDERS)}
 
 
+DEGREE = 5
+NODES = DEGREE + 1
+"""Nodes of the stencil along one axis."""
+
+PADDING = (DEGREE - 1) // 2
+"""Mirrored nodes on every side of the grid, so that the stencil never leaves it."""
+
+
+def _pieces() -> list[list[list[float]]]:
+    """Coefficients of the B-spline pieces as polynomials in the place f within a cell.
+
+    Highest power first, indexed [derivative][node of the stencil]. The piece over node j is that of the truncated power
+    form sum_i (-1)^i C(n+1, i) (f + k - i)^n / n! with k = n - j.
+    """
+    pieces = []
+    for k in range(DEGREE, -1, -1):
+        piece = np.poly1d([0.0])
+        for i in range(k + 1):
+            sign = (-1.0) ** i * comb(DEGREE + 1, i) / factorial(DEGREE)
+            piece = piece + sign * np.poly1d([1.0, k - i]) ** DEGREE
+        pieces.append(piece)
+    return [[piece.deriv(d).coeffs.tolist() for piece in pieces] for d in range(5)]
+
+
+_PIECES = _pieces()
+
+
 class Spline(NamedTuple):
     """Spline coefficients of one layer, ready for the engine (a JAX pytree).
 
     Attributes
     ----------
     coefficients
-        One padding node on every side of the layer's grid; unit of the layer.
+        `PADDING` nodes on every side of the layer's grid; unit of the layer.
     origin_km
         Plane position (x, y) of the layer's node [0, 0].
     spacing_km
@@ -59,14 +89,16 @@ class TimeBracket(NamedTuple):
 
 
 def fit_spline(layer: Layer) -> Spline:
-    """Interpolate a layer's nodes by a cubic spline with mirrored edges.
+    """Interpolate a layer's nodes by a quintic spline with mirrored edges.
 
     Values are kept at every node; a layer must have at least two nodes in each direction.
     """
     values = np.moveaxis(layer.values, -1, 1)
     for axis in (2, 3):
-        values = scipy.ndimage.spline_filter1d(values, order=3, axis=axis, mode="mirror")
-    padded = np.pad(values, ((0, 0), (0, 0), (1, 1), (1, 1)), mode="reflect")
+        values = scipy.ndimage.spline_filter1d(values, order=DEGREE, axis=axis, mode="mirror")
+    padded = np.pad(
+        values, ((0, 0), (0, 0), (PADDING, PADDING), (PADDING, PADDING)), mode="reflect"
+    )
     return Spline(
         coefficients=jnp.asarray(padded),
         origin_km=jnp.asarray([layer.x0_km, layer.y0_km]),
@@ -105,15 +137,14 @@ def spline_jet(
     """All partial derivatives up to `order` (at most 4) of a layer at points, unit per km^order.
 
     Linear in time between slices. Beyond the grid the point is moved to the nearest edge.
-    Row order is `JET_ORDERS`. The fourth derivatives are those of the polynomial piece; the pure
-    ones are zero.
+    Row order is `JET_ORDERS`.
     """
     orders = JET_ORDERS[: jet_rows(order)]
     times, components, ny, nx = spline.coefficients.shape
-    col, weights_x = _stencil(x_km, spline.origin_km[0], spline.spacing_km, nx - 2)
-    row, weights_y = _stencil(y_km, spline.origin_km[1], spline.spacing_km, ny - 2)
+    col, weights_x = _stencil(x_km, spline.origin_km[0], spline.spacing_km, nx - 2 * PADDING)
+    row, weights_y = _stencil(y_km, spline.origin_km[1], spline.spacing_km, ny - 2 * PADDING)
     flat = spline.coefficients.reshape(-1)
-    offsets = jnp.asarray([i * nx + j for i in range(4) for j in range(4)], jnp.int32)[:, None]
+    offsets = np.asarray([i * nx + j for i in range(NODES) for j in range(NODES)])[:, None]
     jets = []
     for component in range(components):
         corner = ((when.earlier * components + component) * ny + row) * nx + col
@@ -126,23 +157,24 @@ def spline_jet(
         along_x = jax.lax.optimization_barrier(
             jnp.stack(
                 [
-                    jnp.stack([_dot(weights_x[a], nodes[4 * i : 4 * i + 4]) for i in range(4)])
-                    for a in range(min(order, 3) + 1)
+                    jnp.stack(
+                        [
+                            _dot(weights_x[a], nodes[NODES * i : NODES * (i + 1)])
+                            for i in range(NODES)
+                        ]
+                    )
+                    for a in range(order + 1)
                 ]
             )
         )
-        zero = jnp.zeros_like(x_km)
-        rows = [
-            zero if max(a, b) > 3 else _dot(weights_y[b], along_x[a]) / spline.spacing_km ** (a + b)
-            for a, b in orders
-        ]
+        rows = [_dot(weights_y[b], along_x[a]) / spline.spacing_km ** (a + b) for a, b in orders]
         jets.append(jnp.stack(rows))
     return jnp.stack(jets)
 
 
 def _gather(
-    flat: Float[Array, " coefficients"], at: Int[Array, "16 points"]
-) -> Float[Array, "16 points"]:
+    flat: Float[Array, " coefficients"], at: Int[Array, "stencil points"]
+) -> Float[Array, "stencil points"]:
     return flat.at[at].get(mode="promise_in_bounds")
 
 
@@ -156,16 +188,17 @@ def _dot(weights: list[Array], values: Array) -> Array:
 def _stencil(
     at_km: Float[Array, " points"], origin_km: Array, spacing_km: Array, nodes: int
 ) -> tuple[Int[Array, " points"], list[list[Array]]]:
-    """First padded node of the 4-node stencil and B-spline weights in cells, [derivative][node]."""
+    """First padded node of the stencil and B-spline weights in cells, [derivative][node]."""
     position = jnp.clip((at_km - origin_km) / spacing_km, 0.0, nodes - 1.0)
     cell = jnp.clip(jnp.floor(position), 0, nodes - 2)
     cell, f = jax.lax.optimization_barrier((cell.astype(jnp.int32), position - cell))
-    g = 1.0 - f
-    one = jnp.ones_like(f)
-    weights = [
-        [g**3 / 6, (3 * f**3 - 6 * f**2 + 4) / 6, (3 * g**3 - 6 * g**2 + 4) / 6, f**3 / 6],
-        [-(g**2) / 2, (3 * f**2 - 4 * f) / 2, -(3 * g**2 - 4 * g) / 2, f**2 / 2],
-        [g, 3 * f - 2, 3 * g - 2, f],
-        [-one, 3 * one, -3 * one, one],
-    ]
+    weights = [[_polynomial(piece, f) for piece in pieces] for pieces in _PIECES]
     return cell, weights
+
+
+def _polynomial(coefficients: list[float], f: Float[Array, " points"]) -> Float[Array, " points"]:
+    """Horner's rule, highest power first."""
+    value = jnp.full_like(f, coefficients[0])
+    for coefficient in coefficients[1:]:
+        value = value * f + coefficient
+    return value

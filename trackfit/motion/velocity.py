@@ -127,7 +127,7 @@ def evaluate_basis(
     y_km: Float[Array, " points"],
     order: int,
 ) -> Basis:
-    """Evaluate what the velocity's derivatives up to `order` (2 or 3) need, at points of the plane.
+    """Evaluate what the velocity's derivatives up to `order` need, at points of the plane.
 
     One compiled call a layer: together they run at half the speed.
     """
