@@ -47,8 +47,8 @@ PADDING = (DEGREE - 1) // 2
 def _pieces() -> list[list[list[float]]]:
     """Coefficients of the B-spline pieces as polynomials in the place f within a cell.
 
-    Highest power first, indexed [derivative][node of the stencil]. The piece over node j is that of the truncated power
-    form sum_i (-1)^i C(n+1, i) (f + k - i)^n / n! with k = n - j.
+    Highest power first, indexed [derivative][node of the stencil]. The piece over node j is that of
+    the truncated power form sum_i (-1)^i C(n+1, i) (f + k - i)^n / n! with k = n - j.
     """
     pieces = []
     for k in range(DEGREE, -1, -1):
