@@ -49,7 +49,7 @@ def check(study_file: Path, quiet: bool) -> None:
     from .words import description
 
     prepared = trackfit.prepare(trackfit.read_study(study_file))
-    _tell_notes(Story(quiet=quiet), prepared.notes)
+    _tell(Story(quiet=quiet), prepared.notes, prepared.warnings)
     click.echo("\n".join(description(prepared)))
 
 
@@ -109,18 +109,18 @@ def demo(folder: Path, quiet: bool, overwrite: bool) -> ExitCode:
 def _fit_and_write(study: "Study", quiet: bool, overwrite: bool, *, fill: bool) -> ExitCode:
     import trackfit
 
-    from .words import parameter_table
+    from .words import convergence, parameter_table, step_check_table
 
     story = Story(quiet=quiet)
     replace = _may_replace(study.output_folder, overwrite)
     prepared = trackfit.prepare(study)
-    _tell_notes(story, prepared.notes)
+    _tell(story, prepared.notes, prepared.warnings)
     with story.progress() as progress:
         fits = trackfit.fit_tags(prepared, progress=progress)
     filled = trackfit.fill_tracks(prepared, fits) if fill else []
     folder = trackfit.write_results(study.output_folder, prepared, fits, filled, overwrite=replace)
-    click.echo("\n".join(parameter_table(fits)))
-    click.echo(f"\nResults: {folder}")
+    click.echo("\n".join([*parameter_table(fits), *step_check_table(fits)]))
+    click.echo(f"\n{convergence(fits)}\nResults: {folder}")
     return _ended(fits)
 
 
@@ -138,9 +138,11 @@ def _may_replace(folder: Path, overwrite: bool) -> bool:
     return overwrite or folder.exists()
 
 
-def _tell_notes(story: Story, notes: Sequence[str]) -> None:
+def _tell(story: Story, notes: Sequence[str], warnings: Sequence[str]) -> None:
     for note in notes:
         story.tell(f"Note: {note}")
+    for warning in warnings:
+        story.tell(f"Warning: {warning}")
 
 
 def _ended(fits: Sequence[Any]) -> ExitCode:

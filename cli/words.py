@@ -38,15 +38,35 @@ def columns(header: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:
 def parameter_table(fits: "Sequence[Fit]") -> list[str]:
     """Return the lines of the parameter table: one row a tag and parameter."""
     rows = [
-        [
-            " ".join((fit.tag, str(row.parameter))),
-            *(f"{x:.4g}" for x in (row.estimate, row.sd, row.lower95, row.upper95)),
-            str(row.unit),
-        ]
+        [f"{fit.tag} {name}", *_numbers(row), str(row["unit"])]
         for fit in fits
-        for row in fit.parameters.itertuples(index=False)
+        for name, row in fit.parameters.set_index("parameter").iterrows()
     ]
     return columns(["tag and parameter", "estimate", "sd", "lower 95", "upper 95", "unit"], rows)
+
+
+def _numbers(row: "pd.Series") -> Sequence[str]:
+    """Estimate, sd and limits; a parameter that the study fixes has no sd to quote."""
+    if row["fixed"]:
+        return [f"{row['estimate']:.4g}", "fixed", "", ""]
+    return [f"{row[name]:.4g}" for name in ("estimate", "sd", "lower95", "upper95")]
+
+
+def step_check_table(fits: "Sequence[Fit]") -> list[str]:
+    """Return the lines that say how far half the step moves each estimate; none if not asked."""
+    rows = [
+        [f"{fit.tag} {row['parameter']}", f"{row['change_in_sd']:+.2f}"]
+        for fit in fits
+        if fit.step_check is not None
+        for _, row in fit.step_check.iterrows()
+    ]
+    return ["", *columns(["at half the step", "change in sd"], rows)] if rows else []
+
+
+def convergence(fits: "Sequence[Fit]") -> str:
+    """Say how many fits converged."""
+    good = sum(fit.status.ok for fit in fits)
+    return f"{good} of {len(fits)} fits converged."
 
 
 def description(prepared: "Prepared") -> list[str]:
@@ -88,8 +108,10 @@ def _set_aside(fixes: "Fixes") -> list[str]:
 def _plane(prepared: "Prepared") -> list[str]:
     table = prepared.fixes.table
     distortion = prepared.plane.distortion(table["lon"], table["lat"])
+    # rounded up, never to a perfect 0.00%
     return [
-        f"Plane: {prepared.plane.description}; distances at the fixes hold to {distortion:.2%}."
+        f"Plane: {prepared.plane.description}; distances at the fixes are true to "
+        f"{max(distortion, 1e-4):.2%}."
     ]
 
 

@@ -38,6 +38,7 @@ class OneFit:
     n_fixes: int = 40
     n_states: int = 97
     step_hours: float = 0.5
+    step_check: pd.DataFrame | None = None
 
 
 @dataclass(frozen=True)

@@ -28,6 +28,7 @@ import trackfit
 from trackfit import faults
 from trackfit.faults import LayerError, TrackfitError
 from trackfit.frame import Plane
+from trackfit.inference.fit import FitStatus
 from trackfit.study import Study, read_study
 from trackfit.study_faults import RULES
 
@@ -88,6 +89,7 @@ class FakeLibrary:
             layers=self.layers,
             coast=None,
             notes=("fixes.csv: 2 rows were out of time order and were sorted",),
+            warnings=("the plane stretches distances by up to 3.1% at the fixes",),
             n_states=lambda tag: {"A1": 109, "B2": 1}[tag],
         )
 
@@ -100,16 +102,21 @@ class FakeLibrary:
             progress(tag, 1.0, "fitted")
         table = pd.DataFrame(
             {
-                "parameter": ["diffusion"],
-                "unit": ["km h^-1/2"],
-                "estimate": [1.23456],
-                "sd": [0.1],
-                "lower95": [1.05],
-                "upper95": [1.45],
+                "parameter": ["diffusion", "error_scale"],
+                "unit": ["km h^-1/2", "1"],
+                "estimate": [1.23456, 2.0],
+                "sd": [0.1, 0.0],
+                "lower95": [1.05, 2.0],
+                "upper95": [1.45, 2.0],
+                "fixed": [False, True],
             }
         )
         status = SimpleNamespace(ok=self.converged, sentence="The search stopped too early.")
-        return [SimpleNamespace(tag=t, parameters=table, status=status) for t in ("A1", "B2")]
+        moved = pd.DataFrame({"parameter": ["diffusion"], "change_in_sd": [0.0712]})
+        return [
+            SimpleNamespace(tag=t, parameters=table, status=status, step_check=check)
+            for t, check in (("A1", moved), ("B2", None))
+        ]
 
     def fill_tracks(self, prepared: Any, fits: list[Any]) -> list[str]:
         self.calls.append("fill_tracks")
@@ -205,7 +212,9 @@ def test_a_fit_that_failed_ends_with_3_and_says_so_even_when_quiet(
 ) -> None:
     library.converged = False
     assert trackfit_cli.main(["fit", study, *flags]) == ExitCode.NOT_CONVERGED == 3
-    assert "A1: The search stopped too early." in capsys.readouterr().err.splitlines()
+    out, err = capsys.readouterr()
+    assert "A1: The search stopped too early." in err.splitlines()
+    assert "0 of 2 fits converged." in out.splitlines()
     assert "write_results" in library.calls
 
 
@@ -287,10 +296,13 @@ def test_check_prints_what_is_there_and_fits_nothing(
     assert "Set aside: 3" in out.splitlines()
     assert re.search(r"^lat is missing +2$", out, re.MULTILINE)
     assert re.search(
-        r"^Plane: Lambert .*; distances at the fixes hold to 0\.00%\.$", out, re.MULTILINE
+        r"^Plane: Lambert .*; distances at the fixes are true to 0\.01%\.$", out, re.MULTILINE
     )
     assert "No layers are named." in out
-    assert err == "Note: fixes.csv: 2 rows were out of time order and were sorted\n"
+    assert err.splitlines() == [
+        "Note: fixes.csv: 2 rows were out of time order and were sorted",
+        "Warning: the plane stretches distances by up to 3.1% at the fixes",
+    ]
 
 
 def test_check_says_when_nothing_is_set_aside(
@@ -338,8 +350,10 @@ def test_run_does_everything_and_prints_the_answer(
     assert library.calls == ["prepare", "fit_tags", "fill_tracks", "write_results"]
     assert library.written == {"folder": folder, "filled": ["A1", "B2"], "overwrite": False}
     assert re.search(r"^A1 diffusion +1\.235 +0\.1 +1\.05 +1\.45 +km h\^-1/2$", out, re.MULTILINE)
-    assert out.endswith(f"Results: {folder}\n")
-    assert err.splitlines()[1:] == ["A1: fitted", "B2: fitted"]
+    assert re.search(r"^B2 error_scale +2 +fixed +1$", out, re.MULTILINE)
+    assert re.search(r"^at half the step +change in sd\nA1 diffusion +\+0\.07$", out, re.MULTILINE)
+    assert out.endswith(f"\n2 of 2 fits converged.\nResults: {folder}\n")
+    assert err.splitlines()[2:] == ["A1: fitted", "B2: fitted"]
 
 
 def test_fit_fills_nothing(library: FakeLibrary, study: str) -> None:
@@ -661,12 +675,9 @@ def test_messages_has_every_class_of_error() -> None:
 
 
 def test_messages_has_every_status_of_a_fit() -> None:
-    if importlib.util.find_spec("trackfit.inference.fit") is None:
-        return
-    from trackfit.inference.fit import FitStatus
-
-    page = messages_page()
-    assert [status.name for status in FitStatus if status.sentence not in page] == []
+    section = messages_page().partition("## The fit ")[2].partition(" ## ")[0]
+    rows = dict(re.findall(r"\| `([A-Z_]+)` \| (.*?) \|", section))
+    assert rows == {status.name: status.sentence for status in FitStatus}
 
 
 def test_messages_has_every_sentence_of_the_command_line() -> None:

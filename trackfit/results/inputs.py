@@ -89,6 +89,10 @@ class FitLike(Protocol):
     def step_hours(self) -> float:
         """Regular step of the grid."""
 
+    @property
+    def step_check(self) -> pd.DataFrame | None:
+        """Change of every parameter at half the step, in standard errors; None if not asked."""
+
 
 class ResponseLike(Protocol):
     """One preference term of one tag: h against the layer, with its 95 % band."""

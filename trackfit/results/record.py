@@ -150,6 +150,9 @@ def _fit_entry(fit: FitLike | None) -> dict[str, object]:
         "states": fit.n_states,
         "step_hours": fit.step_hours,
         "parameters": fit.parameters.to_dict(orient="records"),
+        "change_at_half_the_step_in_sd": None
+        if fit.step_check is None
+        else dict(zip(fit.step_check["parameter"], fit.step_check["change_in_sd"], strict=True)),
     }
 
 

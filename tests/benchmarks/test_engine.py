@@ -1,0 +1,166 @@
+"""The engine against one LAPACK factorisation, its growth and its memory; prints ratios.
+
+Machines are noisy: all figures are ratios of medians measured in turn, in one process (memory: one
+process a size).
+"""
+
+import json
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import jax.numpy as jnp
+import numpy as np
+import pytest
+from scipy.linalg import lapack
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
+
+from engine_standins import (
+    bumpy_layer,
+    isotropic,
+    layer_term,
+    problem_of,
+)
+
+from trackfit.inference.grid import interpolated_start
+from trackfit.inference.laplace import find_mode, marginal_gradient
+from trackfit.layers.splines import fit_spline
+from trackfit.motion import VelocityField
+
+STEP_HOURS = 0.25
+THETA = np.array([np.log(1.5), 5.0, -3.0, -3.0, 2.0, 0.5, 0.0])
+NEAR = THETA + np.array([0.02, 0.2, 0.1, 0.1, 0.1, 0.02, 0.02])
+"""A step of a search: every parameter moves."""
+
+
+def track(states: int):
+    """Three preference layers (one humped, one changing), a current of two, a fix every 17 states."""
+    rng = np.random.default_rng(1)
+    last = STEP_HOURS * states
+    made = {"nodes": 150, "spacing_km": 6.0, "last_hour": last}
+    layers = (bumpy_layer(1, **made), bumpy_layer(2, **made), bumpy_layer(3, times=20, **made))
+    water = bumpy_layer(4, times=20, components=2, **made)
+    field = VelocityField(
+        tuple(layer_term(layer, humped=i == 1) for i, layer in enumerate(layers)),
+        fit_spline(water),
+    )
+    hours = STEP_HOURS * np.arange(states)
+    fixes = states * 1500 // 26_000
+    at = np.sort(rng.choice(states, fixes, replace=False))
+    path = np.zeros((states, 2))
+    noise = 0.75 * rng.normal(size=(states, 2))
+    for i in range(1, states):
+        path[i] = 0.998 * path[i - 1] + noise[i]
+    seen = path[at] + 0.5 * rng.normal(size=(fixes, 2))
+    problem = problem_of(
+        hours[at],
+        seen,
+        isotropic(np.full(fixes, 0.5)),
+        hours=hours,
+        field=field,
+        layers=(layers, water),
+    )
+    return problem, interpolated_start(hours, hours[at], seen, 2)
+
+
+class Warm:
+    """An evaluation as a search makes it: from the last mode, at parameters a step away."""
+
+    def __init__(self, states: int) -> None:
+        self.problem, start = track(states)
+        self.mode = find_mode(self.problem, THETA, start)
+        marginal_gradient(self.problem, self.mode)
+        self.turn = 0
+
+    def evaluate(self) -> float:
+        self.turn += 1
+        theta = NEAR if self.turn % 2 else THETA
+        begun = time.perf_counter()
+        self.mode = find_mode(self.problem, theta, self.mode.states)
+        marginal_gradient(self.problem, self.mode)
+        return time.perf_counter() - begun
+
+    def factor(self) -> float:
+        """LAPACK's banded Cholesky alone, on a matrix in its own order."""
+        band = np.asfortranarray(self.mode.band.reshape(-1, 4).T)
+        begun = time.perf_counter()
+        _, info = lapack.dpbtrf(band, lower=1, overwrite_ab=1)
+        seconds = time.perf_counter() - begun
+        assert info == 0
+        return seconds
+
+
+@pytest.mark.benchmark
+@pytest.mark.slow
+def test_a_warm_evaluation_costs_forty_factorisations_at_most():
+    """26,000 states, 1,500 fixes: -log p(y | theta) with its exact gradient."""
+    warm = Warm(26_000)
+    assert (warm.problem.n_states, len(warm.problem.observations.state)) == (26_000, 1500)
+    warm.evaluate(), warm.evaluate()
+    pairs = np.array([(warm.evaluate(), warm.factor()) for _ in range(15)])
+    evaluation, factorisation = np.median(pairs, axis=0)
+    ratio = evaluation / factorisation
+    print(
+        f"\nwarm marginal likelihood with gradient: {1e3 * evaluation:.0f} ms "
+        f"({warm.mode.newton_steps} Newton steps), one banded factorisation "
+        f"{1e3 * factorisation:.2f} ms, ratio {ratio:.0f} (quickest of each: "
+        f"{pairs[:, 0].min() / pairs[:, 1].min():.0f})"
+    )
+    assert ratio <= 40.0
+
+
+@pytest.mark.benchmark
+@pytest.mark.slow
+def test_the_time_grows_with_the_number_of_states():
+    """2,600 to 260,000 states: at most 1.1 times linear."""
+    small, large = Warm(2_600), Warm(260_000)
+    for warm in (small, large):
+        warm.evaluate(), warm.evaluate()
+    pairs = np.array(
+        [(np.median([small.evaluate() for _ in range(5)]), large.evaluate()) for _ in range(7)]
+    )
+    quick, slow = np.median(pairs, axis=0)
+    growth = slow / quick / 100.0
+    print(
+        f"\n2,600 states {1e3 * quick:.1f} ms, 260,000 states {1e3 * slow:.0f} ms: "
+        f"{growth:.2f} times linear"
+    )
+    assert growth <= 1.1
+
+
+@pytest.mark.benchmark
+@pytest.mark.slow
+def test_memory_a_state():
+    """Largest resident size of processes that evaluate once, by the number of states."""
+    sizes = (26_000, 104_000)
+    peaks = [
+        json.loads(
+            subprocess.run(
+                [sys.executable, __file__, str(states)], capture_output=True, text=True, check=True
+            ).stdout
+        )
+        for states in sizes
+    ]
+    per_state = 1024.0 * (peaks[1] - peaks[0]) / (sizes[1] - sizes[0])
+    print(
+        f"\npeak memory {peaks[0] / 1024:.0f} MB at {sizes[0]} states, {peaks[1] / 1024:.0f} MB at "
+        f"{sizes[1]}: {per_state / 1e3:.1f} kB a state"
+    )
+    # 5 layers x 15 rows x 8 bytes are 0.9 kB (jets of order four); a dozen such arrays
+    assert per_state < 20e3
+
+
+def measure(states: int) -> None:
+    """Print the peak resident size in kB after two evaluations."""
+    import resource
+
+    warm = Warm(states)
+    warm.evaluate()
+    assert jnp.isfinite(warm.mode.negative_log_marginal)
+    print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
+
+
+if __name__ == "__main__":
+    measure(int(sys.argv[1]))
