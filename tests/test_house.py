@@ -154,7 +154,9 @@ def test_everything_is_annotated(module):
     for node in ast.walk(TREES[module]):
         if isinstance(node, ast.FunctionDef):
             arguments = [*node.args.posonlyargs, *node.args.args, *node.args.kwonlyargs]
-            bare = [a.arg for a in arguments if a.annotation is None and a.arg not in ("self", "cls")]
+            bare = [
+                a.arg for a in arguments if a.annotation is None and a.arg not in ("self", "cls")
+            ]
             assert not bare, (node.name, bare)
             assert node.returns is not None or node.name == "__init__", node.name
 

@@ -116,9 +116,7 @@ def test_the_band_is_that_of_draws_of_the_parameters(fit):
     for response, columns in zip(responses_of(fit, NAMES), ((1, 2), (3,), (4,)), strict=True):
         centre, scale = {1: (CENTRE, SCALE), 3: (-1.0, 0.5), 4: (0.0, 1.0)}[columns[0]]
         z = (response.at - centre) / scale
-        curves = sum(
-            theta[:, c, None] * z ** (power + 1) for power, c in enumerate(columns)
-        )
+        curves = sum(theta[:, c, None] * z ** (power + 1) for power, c in enumerate(columns))
         low, high = np.quantile(curves, [0.025, 0.975], axis=0)
         width = (response.upper95 - response.lower95).max()
         assert np.abs(response.lower95 - low).max() < 0.05 * width

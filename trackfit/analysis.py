@@ -267,6 +267,7 @@ def _fit_tag(prepared: Prepared, tag: str, progress: TagProgress) -> Fit:
         coarse_factor=study.fit.coarse_factor,
         max_iterations=study.fit.max_iterations,
         step_check=study.fit.step_check,
+        points=study.fit.points,
     )
     fit = fit_track(
         data,

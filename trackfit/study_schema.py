@@ -254,6 +254,21 @@ class Motion(Table):
         ge=MINUTE_HOURS,
         le=24,
     )
+    pace_log_sd: float = setting(
+        0.0,
+        "How much the pace of the movement changes in time: the standard deviation of its "
+        "logarithm from spell to spell. 0 keeps one pace; 0.5 lets it differ by a factor of 1.6 "
+        "either way. A varying pace makes regions wide where the animal is restless, narrow where "
+        "it is steady.",
+        ge=0,
+        le=3,
+    )
+    pace_hours: float = setting(
+        24.0,
+        "Length of a spell of one pace; paces of spells twice this apart are all but unrelated.",
+        unit="hours",
+        gt=0,
+    )
 
 
 class Point(Table):
@@ -365,6 +380,14 @@ class Fit(Table):
     )
     step_check: bool = setting(
         False, "Fit again with half the step and report how far the estimates move."
+    )
+    points: int = setting(
+        128,
+        "Weighted points that stand for the parameters' posterior, which is often skewed; "
+        "estimates, intervals and positions average over them. 0 takes the plain normal "
+        "approximation, which is faster.",
+        ge=0,
+        le=8192,
     )
     max_iterations: int = setting(100, "Longest search before it counts as not converged.", ge=1)
 
