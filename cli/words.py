@@ -47,7 +47,7 @@ def parameter_table(fits: "Sequence[Fit]") -> list[str]:
 
 def _numbers(row: "pd.Series") -> Sequence[str]:
     """Estimate, sd and limits; a parameter that the study fixes has no sd to quote."""
-    if row["fixed"]:
+    if row["role"] == "fixed":
         return [f"{row['estimate']:.4g}", "fixed", "", ""]
     return [f"{row[name]:.4g}" for name in ("estimate", "sd", "lower95", "upper95")]
 

@@ -193,7 +193,11 @@ def _propagate(
         raise ModeNotFound("the density is not finite at the start")
     sweeps, mixer = 0, SiteMixer()
     for rounds in range(MAX_ROUNDS):
-        band, cholesky, exact = factored(problem, point, sites)
+        try:
+            band, cholesky, exact = factored(problem, point, sites)
+        except ModeNotFound:
+            sites = sites.without_negative()
+            band, cholesky, exact = factored(problem, point, sites)
         spread = spread_around(problem, theta, point, band, cholesky)
         linear = _Linear(problem, point, spread.adjoint, exact)
         for sweep in range(SWEEPS_PER_ROUND):

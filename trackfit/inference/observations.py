@@ -34,6 +34,16 @@ class Sites:
             self.pull + share * (other.pull - self.pull),
         )
 
+    def without_negative(self) -> Sites:
+        """The same sites with negative precisions set to zero along their axes.
+
+        A fix that contradicts the others may ask for negative precision; where the states are far
+        from their mode that can leave no Hessian to go on with.
+        """
+        values, axes = np.linalg.eigh(self.precision)
+        kept = np.maximum(values, 0.0)
+        return Sites(np.einsum("kab,kb,kcb->kac", axes, kept, axes), self.pull)
+
 
 @dataclass(frozen=True)
 class Observations:
