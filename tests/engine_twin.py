@@ -16,9 +16,9 @@ from engine_standins import (
     start_prior,
 )
 
-from trackfit.inference.grid import nearest_state, time_grid
+from trackfit.inference.grid import PacePrior, nearest_state, time_grid
 from trackfit.layers.splines import fit_spline
-from trackfit.motion import VelocityField
+from trackfit.motion import Diffusive, Persistent, VelocityField
 
 
 def polynomial(coefficients, x, y):
@@ -69,31 +69,57 @@ TWIN_FIELD = VelocityField(
 THETA = np.array([np.log(1.1), 2.0, -1.2, 1.5, -0.6, 0.8, 0.15])
 """log sigma; z, z^2, changing layer, distance; kappa; log error scale."""
 
+PERSISTENT_THETA = np.array([np.log(1.3), np.log(2.5), *THETA[1:], 0.6, -1.1, 0.4])
+"""log speed, log persistence; then as above, and a number for each of three spells."""
+PACE = PacePrior(log_sd=0.5, spell_hours=4.0, alike_hours=8.0)
 
-def preference(theta, x, y, t):
+
+def preference(amplitudes, x, y, t):
     z = (polynomial(FIRST, x, y) - 0.1) / 0.8
     far = jnp.sqrt((x - COLONY[0]) ** 2 + (y - COLONY[1]) ** 2 + 1.0)
     return (
-        theta[1] * z + theta[2] * z**2 + theta[3] * (changing(x, y, t) + 0.2) / 0.5 + theta[4] * far
+        amplitudes[0] * z
+        + amplitudes[1] * z**2
+        + amplitudes[2] * (changing(x, y, t) + 0.2) / 0.5
+        + amplitudes[3] * far
     )
 
 
-def drift(theta, x, y, t):
-    up = jax.vmap(jax.grad(preference, argnums=(1, 2)), (None, 0, 0, 0))(theta, x, y, t)
-    return jnp.stack([up[0] + theta[5] * water_x(x, y, t), up[1] + theta[5] * water_y(x, y, t)], 1)
+def drift(amplitudes, x, y, t):
+    up = jax.vmap(jax.grad(preference, argnums=(1, 2)), (None, 0, 0, 0))(amplitudes, x, y, t)
+    carried = amplitudes[4]
+    return jnp.stack([up[0] + carried * water_x(x, y, t), up[1] + carried * water_y(x, y, t)], 1)
+
+
+NODES, WEIGHTS = np.polynomial.legendre.leggauss(12)
+
+
+def integrated_velocity(speed, tau, dt):
+    """F, G and Q of one axis; Q by Gauss-Legendre quadrature of what noise leaves at the end."""
+    back = 0.5 * dt[:, None] * (1.0 + NODES)
+    gone = jnp.exp(-back / tau)
+    reach = jnp.stack([tau * (1.0 - gone), gone])
+    weight = 0.5 * dt[:, None] * WEIGHTS * speed**2 / tau
+    Q = jnp.einsum("pin,qin,in->ipq", reach, reach, weight)
+    a = jnp.exp(-dt / tau)
+    one = jnp.ones_like(dt)
+    F = jnp.stack([jnp.stack([one, tau * (1 - a)], 1), jnp.stack([0 * dt, a], 1)], 1)
+    return F, jnp.stack([dt - tau * (1 - a), 1 - a], 1), Q
 
 
 class Twin:
     """-log joint density with all its constants, and Laplace's approximation, densely."""
 
-    def __init__(self, seed=4, fixes=9):
+    def __init__(self, seed=4, fixes=9, persistent=False):
+        self.persistent = persistent
+        self.motion = Persistent() if persistent else Diffusive()
         rng = np.random.default_rng(seed)
         self.fix_hours = np.sort(rng.uniform(0, LAST_HOUR, fixes))
         self.fix_hours[0] = 0.0
         # two fixes of one moment, and one a tenth of a second after a grid time
         self.fix_hours[4] = self.fix_hours[3]
         self.fix_hours[-1] = 9.5 + 0.1 / 3600
-        self.hours = time_grid(self.fix_hours, 0.5, np.zeros(0))
+        self.hours = time_grid(self.fix_hours, 0.5, np.zeros(0), self.motion.same_moment_hours)
         self.state = nearest_state(self.hours, self.fix_hours)
         self.at_km = np.cumsum(rng.normal(size=(fixes, 2)) * 1.5, axis=0)
         self.covariance = random_covariances(rng, fixes, 0.3)
@@ -108,23 +134,52 @@ class Twin:
             field=TWIN_FIELD,
             layers=TWIN_LAYERS,
             start=self.start,
+            motion=self.motion,
+            pace=PACE if persistent else None,
         )
+        middle = 0.5 * (self.hours[1:] + self.hours[:-1]) - self.hours[0]
+        self.spell = np.minimum(middle // PACE.spell_hours, 2).astype(int)
+        apart = PACE.spell_hours * np.abs(np.subtract.outer(np.arange(3), np.arange(3)))
+        self.pace_root = np.linalg.cholesky(PACE.log_sd**2 * np.exp(-apart / PACE.alike_hours))
         self.gradient = jax.jit(jax.grad(self.density))
         self.hessian = jax.jit(jax.hessian(self.density))
         self.cross = jax.jit(jax.jacfwd(jax.grad(self.density), argnums=1))
         self.third = jax.jit(jax.jacfwd(jax.hessian(self.density), argnums=(0, 1)))
 
     def density(self, flat, theta):
-        z = flat.reshape(-1, 2)
+        """-log p(z, y): steps, fixes and start."""
+        z = flat.reshape(-1, 4 if self.persistent else 2)
+        log_scale = theta[7] if self.persistent else theta[6]
+        e = z[self.state, :2] - self.at_km
+        fixes = 0.5 * jnp.exp(-2 * log_scale) * jnp.einsum("ka,kab,kb->k", e, self.precision, e)
+        fixes += 2.0 * log_scale + self.half_log_dets
+        first = 0.5 * jnp.sum((z[0, :2] - jnp.array([0.5, 0.3])) ** 2) / 16.0
+        first += jnp.log(2 * jnp.pi * 16.0)
+        steps = self.persistent_steps if self.persistent else self.diffusive_steps
+        return steps(z, theta) + fixes.sum() + first
+
+    def diffusive_steps(self, z, theta):
         dt = jnp.diff(self.hours)
-        mean = z[:-1] + drift(theta, z[:-1, 0], z[:-1, 1], self.hours[:-1]) * dt[:, None]
+        mean = z[:-1] + drift(theta[1:6], z[:-1, 0], z[:-1, 1], self.hours[:-1]) * dt[:, None]
         variance = jnp.exp(2 * theta[0]) * dt[:, None]
         steps = 0.5 * (z[1:] - mean) ** 2 / variance + 0.5 * jnp.log(2 * jnp.pi * variance)
-        e = z[self.state] - self.at_km
-        fixes = 0.5 * jnp.exp(-2 * theta[-1]) * jnp.einsum("ka,kab,kb->k", e, self.precision, e)
-        fixes += 2.0 * theta[-1] + self.half_log_dets
-        first = 0.5 * jnp.sum((z[0] - jnp.array([0.5, 0.3])) ** 2) / 16.0
-        return steps.sum() + fixes.sum() + first + jnp.log(2 * jnp.pi * 16.0)
+        return steps.sum()
+
+    def persistent_steps(self, z, theta):
+        """Steps, and the first velocity: spread around the field as in the long run."""
+        speed, tau = jnp.exp(theta[0]), jnp.exp(theta[1])
+        pace = jnp.exp(jnp.asarray(self.pace_root) @ theta[8:])
+        F, G, Q = integrated_velocity(speed, tau, jnp.diff(self.hours))
+        u = drift(theta[2:7], z[:, 0], z[:, 1], self.hours)
+        by_axis = z.reshape(-1, 2, 2)
+        mean = jnp.einsum("ipq,iqx->ipx", F, by_axis[:-1]) + jnp.einsum("ip,ix->ipx", G, u[:-1])
+        r = by_axis[1:] - mean
+        Q = Q * (pace[self.spell] ** 2)[:, None, None]
+        steps = 0.5 * jnp.einsum("ipx,ipq,iqx->", r, jnp.linalg.inv(Q), r)
+        steps += jnp.sum(jnp.log(jnp.linalg.det(2 * jnp.pi * Q)))
+        variance = 0.5 * speed**2 * pace[0] ** 2
+        first = 0.5 * jnp.sum((z[0, 2:] - u[0]) ** 2) / variance + jnp.log(2 * jnp.pi * variance)
+        return steps + first
 
     def mode(self, theta, start):
         flat = jnp.asarray(start).reshape(-1)

@@ -52,7 +52,7 @@ def test_other_tags_are_set_aside_with_their_reason(demo):
 def test_the_truths_are_within_four_standard_errors(demo):
     truth = pd.read_csv(demo.folder / "truth" / "true_parameters.csv")
     table = trackfit.parameter_table(demo.fits).merge(truth, on=["tag", "parameter"])
-    free = table[~table["fixed"]]
+    free = table[table["role"] == "estimated"]
     assert len(free) == 12
     positive = free["parameter"] == "diffusion"
     off = np.where(
@@ -224,7 +224,7 @@ def test_a_path_that_leaves_a_layer_between_the_fixes(demo):
     tag = DEMO_TAGS[0]
     fit = next(f for f in demo.fits if f.tag == tag)
     data = prepared.tracks[tag]
-    path = fit.states.mode.states[:, :2]
+    path = fit.states.mean[:, :2]
     holes = (holed(prepared.layers["depth"], place) for place in path)
     hole = next(layer for layer in holes if layer.covers(data.at_km).all())
     layers = {**prepared.layers, "depth": hole}

@@ -108,7 +108,7 @@ class FakeLibrary:
                 "sd": [0.1, 0.0],
                 "lower95": [1.05, 2.0],
                 "upper95": [1.45, 2.0],
-                "fixed": [False, True],
+                "role": ["estimated", "fixed"],
             }
         )
         status = SimpleNamespace(ok=self.converged, sentence="The search stopped too early.")

@@ -24,9 +24,10 @@ from hypothesis import strategies as st
 
 from trackfit.inference.banded import dense
 from trackfit.inference.fit import FitStatus, Model, TrackData
+from trackfit.inference.marginal import approximate
 from trackfit.inference.parameters import ParameterSet
 from trackfit.model import typical_diffusion
-from trackfit.motion import Diffusive, VelocityField
+from trackfit.motion import Diffusive, Persistent, VelocityField
 
 
 @pytest.fixture(scope="module")
@@ -120,7 +121,7 @@ def twin_fit():
     z = [np.zeros(2)]
     for t, dt in zip(twin.hours[:-1], np.diff(twin.hours), strict=True):
         x, y = (jnp.asarray([v]) for v in z[-1])
-        up = np.asarray(drift(jnp.asarray(THETA), x, y, jnp.asarray([t])))[0]
+        up = np.asarray(drift(jnp.asarray(THETA[1:6]), x, y, jnp.asarray([t])))[0]
         z.append(z[-1] + up * dt + np.exp(THETA[0]) * np.sqrt(dt) * rng.normal(size=2))
     z = np.array(z)
     noise = np.einsum("kab,kb->ka", np.linalg.cholesky(twin.covariance), rng.normal(size=(24, 2)))
@@ -152,7 +153,7 @@ class Twin_of:
     def penalised(self, theta):
         """Gradient of the negative log posterior by the twin."""
         twin = self.twin
-        flat = twin.mode(jnp.asarray(theta), self.fit.states.mode.states)
+        flat = twin.mode(jnp.asarray(theta), self.fit.states.approximation.mode.states)
         slope = np.asarray(twin.marginal_gradient(jnp.asarray(theta), flat))
         return slope + self.model.parameters.penalty(np.asarray(theta))[1]
 
@@ -186,7 +187,7 @@ def test_the_total_covariance_of_a_full_fit(twin_fit):
     fit = twin_fit.fit
     states = fit.states
     n = states.problem.n_states
-    inverse = np.linalg.inv(dense(states.mode.band))
+    inverse = np.linalg.inv(dense(states.approximation.mode.band))
     J = states.sensitivity.reshape(2 * n, -1)
     total = inverse + J @ states.theta_covariance @ J.T
     blocks = total.reshape(n, 2, n, 2)[np.arange(n), :, np.arange(n)]
@@ -203,10 +204,10 @@ def test_draws_have_the_mean_and_covariance_of_the_whole_path(twin_fit):
     states = twin_fit.fit.states
     n = states.problem.n_states
     J = states.sensitivity.reshape(2 * n, -1)
-    cov = np.linalg.inv(dense(states.mode.band)) + J @ states.theta_covariance @ J.T
+    cov = np.linalg.inv(dense(states.approximation.mode.band)) + J @ states.theta_covariance @ J.T
     draws = states.draw(4000, np.random.default_rng(8))
     assert draws.shape == (4000, n, 2)
-    offset = draws.reshape(4000, -1) - states.mode.states.ravel()
+    offset = draws.reshape(4000, -1) - states.mean.ravel()
     var = np.diag(cov)
     assert (np.abs(offset.mean(axis=0)) < 4.5 * np.sqrt(var / 4000)).all()
     spread = np.sqrt((np.outer(var, var) + cov**2) / 4000)
@@ -222,7 +223,7 @@ def test_simulated_parameters_are_found(twin_fit):
 def test_the_log_marginal_leaves_the_priors_out(twin_fit):
     fit, twin = twin_fit.fit, twin_fit.twin
     theta = jnp.asarray(fit.states.theta)
-    flat = twin.mode(theta, fit.states.mode.states)
+    flat = twin.mode(theta, fit.states.approximation.mode.states)
     # a decrement of 1e-9 leaves the mode 3e-5 standard deviations off; log det H feels that
     assert fit.log_marginal == pytest.approx(
         -float(twin.negative_log_marginal(theta, flat)), abs=1e-5
@@ -234,7 +235,7 @@ def test_the_table_of_parameters():
     fit = quick_fit(data, still_model(weak=True, scale_fixed=False))
     table = fit.parameters
     assert table.columns.tolist() == [
-        "parameter", "unit", "estimate", "sd", "lower95", "upper95", "fixed",
+        "parameter", "unit", "estimate", "sd", "lower95", "upper95", "role",
     ]  # fmt: skip
     theta, sd = fit.states.theta, np.sqrt(np.diag(fit.states.theta_covariance))
     z = scipy.stats.norm.ppf(0.975)
@@ -242,6 +243,7 @@ def test_the_table_of_parameters():
     assert np.allclose(table["sd"], sd * np.exp(theta), rtol=1e-12)
     assert np.allclose(table["lower95"], np.exp(theta - z * sd), rtol=1e-12)
     assert np.allclose(table["upper95"], np.exp(theta + z * sd), rtol=1e-12)
+    assert table["role"].tolist() == ["estimated"] * 2
     assert (fit.n_fixes, fit.n_states, fit.step_hours) == (60, 60, 1.0)
 
 
@@ -250,8 +252,104 @@ def test_a_fixed_parameter_keeps_its_value():
     fit = quick_fit(data, still_model(log_scale=np.log(1.7)))
     row = fit.parameters.set_index("parameter").loc["error_scale"]
     assert row[["estimate", "lower95", "upper95"]].tolist() == pytest.approx([1.7] * 3)
-    assert (row["sd"], row["fixed"]) == (0.0, True)
+    assert (row["sd"], row["role"]) == (0.0, "fixed")
     assert fit.states.theta.shape == (1,)
+
+
+def test_a_derived_parameter_is_reported_beside_the_others():
+    """Long-run diffusion w sqrt(tau), its interval from the covariance of both logarithms."""
+    data, _ = walk(3, 60)
+    model = dataclasses.replace(
+        still_model(),
+        motion=Persistent(),
+        parameters=ParameterSet(
+            (
+                parameter("speed", positive=True, sd=2.0),
+                parameter("persistence", positive=True, sd=2.0),
+                parameter("error_scale", positive=True, fixed=True),
+            )
+        ),
+    )
+    fit = quick_fit(data, model)
+    assert fit.status is FitStatus.CONVERGED
+    table = fit.parameters.set_index("parameter")
+    assert table["role"].tolist() == ["estimated", "estimated", "fixed", "derived"]
+    row = table.loc["long_run_diffusion"]
+    estimate = table["estimate"]
+    assert row["unit"] == "km/sqrt(h)"
+    assert row["estimate"] == pytest.approx(
+        estimate["speed"] * np.sqrt(estimate["persistence"]), rel=1e-12
+    )
+    along = np.array([1.0, 0.5])
+    sd = np.sqrt(along @ fit.states.theta_covariance @ along)
+    assert np.log(row["upper95"] / row["estimate"]) == pytest.approx(1.959963985 * sd, rel=1e-8)
+
+
+@pytest.fixture(scope="module")
+def pointed():
+    """Two parameters of fifteen fixes: skewed posteriors."""
+    data, _ = walk(8, 15)
+    model = still_model(weak=True, scale_fixed=False)
+    return quick_fit(data, model), quick_fit(data, model, points=256)
+
+
+def test_weighted_points_against_the_whole_posterior(pointed):
+    """Means and spreads on the engine's scale by a net over both parameters: 5 % of an sd."""
+    _, fit = pointed
+    problem, parameters = fit.states.problem, fit.model.parameters
+    theta, sd = fit.states.theta, np.sqrt(np.diag(fit.states.theta_covariance))
+    z = np.linspace(-5.0, 5.0, 31)
+    net = theta + sd * np.stack(np.meshgrid(z, z, indexing="ij"), axis=-1).reshape(-1, 2)
+    log_density = np.array(
+        [
+            -approximate(problem, at, fit.states.approximation.warm).negative_log_marginal
+            - parameters.penalty(at)[0]
+            for at in net
+        ]
+    )
+    weight = np.exp(log_density - log_density.max())
+    weight /= weight.sum()
+    mean = weight @ net
+    spread = np.sqrt(weight @ (net - mean) ** 2)
+    points = fit.states.points
+    assert np.abs((points.mean - mean) / spread).max() < 0.05
+    assert np.sqrt(np.diag(points.covariance)) == pytest.approx(spread, rel=0.1)
+    table = fit.parameters
+    assert np.log(table["estimate"]).to_numpy() == pytest.approx(points.mean, abs=1e-12)
+    for i, column in ((0, "lower95"), (1, "upper95")):
+        level = (0.025, 0.975)[i]
+        values = [points.quantile(points.at[:, j], level) for j in range(2)]
+        assert np.log(table[column]).to_numpy() == pytest.approx(values, abs=1e-12)
+
+
+def test_positions_are_averaged_over_the_points(pointed):
+    plain, fit = pointed
+    states = fit.states
+    mixture, points = states.mixture, states.points
+    assert mixture.weight is points.weight
+    assert np.array_equal(states.positions_km(), mixture.mean())
+    assert np.array_equal(states.position_covariance_km2(), mixture.covariance())
+    some = np.argsort(points.weight)[-3:]
+    for i in some:
+        found = approximate(states.problem, points.at[i], states.approximation.warm)
+        # a decrement of 1e-9 at each: 3e-5 of an sd
+        assert np.allclose(found.mode.states[:, :2], mixture.mean_km[i], rtol=0, atol=1e-4)
+    # without points: the normal approximation carried to first order, not far away
+    away = np.abs(states.positions_km() - plain.states.positions_km())
+    sd = np.sqrt(np.einsum("naa->na", plain.states.position_covariance_km2()))
+    assert (away < 0.3 * sd).all()
+    assert plain.states.squared_radius(0.95) == pytest.approx(np.full(15, -2 * np.log(0.05)))
+
+
+def test_draws_from_the_points_have_the_mixture_s_moments(pointed):
+    _, fit = pointed
+    draws = fit.states.draw(4000, np.random.default_rng(3))[..., :2]
+    cov = fit.states.position_covariance_km2()
+    sd = np.sqrt(np.einsum("naa->na", cov))
+    off = (draws.mean(axis=0) - fit.states.positions_km()) / sd
+    # 30 comparisons at 4.5 standard errors
+    assert np.abs(off).max() < 4.5 / np.sqrt(4000)
+    assert draws.var(axis=0) / sd**2 == pytest.approx(np.ones_like(sd), abs=0.15)
 
 
 def test_where_the_data_are_silent_the_prior_speaks():
@@ -273,7 +371,10 @@ def test_too_few_fixes(fixes):
     assert fit.status is FitStatus.TOO_FEW_FIXES
     assert fit.states is None
     assert (fit.n_fixes, fit.n_states) == (fixes, 0)
-    assert fit.parameters[["estimate", "sd", "lower95", "upper95"]].isna().all(axis=None)
+    numbers = fit.parameters.set_index("parameter")[["estimate", "sd", "lower95", "upper95"]]
+    assert numbers.loc["diffusion"].isna().all()
+    # what the study fixed is still known
+    assert numbers.loc["error_scale"].tolist() == [1.0, 0.0, 1.0, 1.0]
     assert np.isnan(fit.log_marginal)
 
 
@@ -452,7 +553,7 @@ def fit_garbage(table, weak, scale_fixed, field):
     if fit.states is None:
         assert fit.status in (FitStatus.NO_MODE, FitStatus.TOO_FEW_FIXES)
         return fit
-    assert np.isfinite(fit.states.mode.states).all()
+    assert np.isfinite(fit.states.approximation.mode.states).all()
     assert np.isfinite(fit.parameters[["estimate", "sd"]]).all(axis=None)
     assert (fit.parameters["sd"] >= 0).all()
     assert np.isfinite(fit.states.draw(2, np.random.default_rng(1))).all()

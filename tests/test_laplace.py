@@ -1,5 +1,7 @@
 """The Laplace engine against exact Gaussians, a dense twin of its own, and published series."""
 
+import functools
+
 import jax.numpy as jnp
 import numpy as np
 import pytest
@@ -8,38 +10,40 @@ import scipy.stats
 import statsmodels.api
 from engine_standins import (
     STILL,
+    approximation_of,
     bumpy_layer,
+    covariance_of,
     distance_term,
     field_layer,
     isotropic,
     layer_term,
-    mode_of,
     problem_of,
     random_covariances,
     start_prior,
 )
-from engine_twin import THETA, TWIN_FIELD, TWIN_LAYERS, Twin
+from engine_twin import PACE, PERSISTENT_THETA, THETA, TWIN_FIELD, TWIN_LAYERS, Twin
 from hypothesis import given
 from hypothesis import strategies as st
 
 from trackfit.inference import laplace
-from trackfit.inference.banded import dense
+from trackfit.inference.banded import dense, factor
 from trackfit.inference.grid import (
-    SAME_MOMENT_HOURS,
+    CROWDED_SHARE,
     START_SD_KM,
+    PacePrior,
     interpolated_start,
     nearest_state,
     padded_size,
     time_grid,
 )
-from trackfit.inference.laplace import (
-    ModeNotFound,
-    find_mode,
-    marginal_gradient,
-    mode_sensitivity,
-)
+from trackfit.inference.laplace import ModeNotFound, find_mode, mode_sensitivity
+from trackfit.inference.marginal import Warm, approximate
+from trackfit.inference.problem import Point, evaluate_at
+from trackfit.inference.process import linear_steps
 from trackfit.layers.splines import fit_spline
-from trackfit.motion import VelocityField
+from trackfit.motion import Diffusive, Persistent, VelocityField
+
+SAME_MOMENT_HOURS = Diffusive.same_moment_hours
 
 
 @pytest.fixture(scope="module")
@@ -69,12 +73,6 @@ def nile_problem(flow, start_variance, *, seen=slice(None), extra_hours=()):
     )
 
 
-def covariance_of(problem, mode):
-    """Covariance blocks of the states (states, 2, 2)."""
-    blocks = marginal_gradient(problem, mode).inverse.covariance
-    return np.moveaxis(np.asarray(blocks), -1, 0)[: problem.n_states]
-
-
 # --- exact where the density is Gaussian -----------------------------------------------------
 
 
@@ -89,15 +87,17 @@ def covariance_of(problem, mode):
 )
 def test_the_likelihood_of_the_nile(nile, start_variance, published):
     problem, years = nile_problem(nile, start_variance)
-    mode = mode_of(problem, NILE_THETA, years)
-    assert -mode.negative_log_marginal / 2 == pytest.approx(published, abs=6e-6)
+    found = approximation_of(problem, NILE_THETA, years)
+    assert -found.negative_log_marginal / 2 == pytest.approx(published, abs=6e-6)
 
 
 def test_grid_times_between_the_fixes_change_nothing(nile):
-    plain = mode_of(*with_theta(nile_problem(nile, 1e7)))
-    finer = mode_of(*with_theta(nile_problem(nile, 1e7, extra_hours=np.arange(0, 99, 0.125))))
+    plain = approximation_of(*with_theta(nile_problem(nile, 1e7)))
+    finer = approximation_of(
+        *with_theta(nile_problem(nile, 1e7, extra_hours=np.arange(0, 99, 0.125)))
+    )
     assert finer.negative_log_marginal == pytest.approx(plain.negative_log_marginal, rel=1e-12)
-    assert np.allclose(finer.states[::8], plain.states, rtol=0, atol=1e-8)
+    assert np.allclose(finer.mode.states[::8], plain.mode.states, rtol=0, atol=1e-8)
 
 
 def with_theta(made):
@@ -112,8 +112,8 @@ def diffuse_log_likelihood(flow, seen=slice(None)):
     """
     values = []
     for variance in (1e8, 1e9):
-        mode = mode_of(*with_theta(nile_problem(flow, variance, seen=seen)))
-        values.append(-mode.negative_log_marginal / 2 + 0.5 * np.log(variance))
+        found = approximation_of(*with_theta(nile_problem(flow, variance, seen=seen)))
+        values.append(-found.negative_log_marginal / 2 + 0.5 * np.log(variance))
     return values[1] + (values[1] - values[0]) / 9.0
 
 
@@ -130,26 +130,26 @@ def test_the_nile_with_gaps(nile):
     """Durbin & Koopman section 2.7: years 21-40 and 61-80 missing; statsmodels' figures."""
     assert diffuse_log_likelihood(nile, GAPS) == pytest.approx(-381.506001, abs=2e-5)
     problem, years = nile_problem(nile, 1e10, seen=GAPS)
-    mode = mode_of(problem, NILE_THETA, years)
-    variance = covariance_of(problem, mode)[:, 0, 0]
+    found = approximation_of(problem, NILE_THETA, years)
+    variance = covariance_of(found)[:, 0, 0]
     for t, mean, spread in ((30, 903.421103, 9715.005902), (70, 837.177324, 9715.005549)):
         # a prior of sd 1e5 instead of a diffuse one moves the second digit after the point by
         # 1e4 / 1e10 of the values: 1e-3 at most near the start, far less inside
-        assert mode.states[t - 1] == pytest.approx(mean, abs=2e-5)
+        assert found.mode.states[t - 1] == pytest.approx(mean, abs=2e-5)
         assert variance[t - 1] == pytest.approx(spread, abs=2e-4)
 
 
 def test_the_smoothed_nile(nile):
     """statsmodels' smoother with a diffuse start, recomputed for this project."""
     problem, years = nile_problem(nile, 1e10)
-    mode = mode_of(problem, NILE_THETA, years)
+    found = approximation_of(problem, NILE_THETA, years)
     # a prior N(0, 1e10) draws the first level by 1100 * 4032 / 1e10 = 4e-4; further on by less
-    assert mode.states[0] == pytest.approx(1111.66832, abs=6e-4)
-    assert mode.states[1] == pytest.approx(1110.85766, abs=6e-4)
-    assert mode.states[2] == pytest.approx(1105.26557, abs=4e-4)
-    assert mode.states[-1] == pytest.approx(798.37029, abs=1e-5)
-    assert np.allclose(mode.states[:, 0], mode.states[:, 1], rtol=0, atol=1e-9)
-    covariance = covariance_of(problem, mode)
+    assert found.mode.states[0] == pytest.approx(1111.66832, abs=6e-4)
+    assert found.mode.states[1] == pytest.approx(1110.85766, abs=6e-4)
+    assert found.mode.states[2] == pytest.approx(1105.26557, abs=4e-4)
+    assert found.mode.states[-1] == pytest.approx(798.37029, abs=1e-5)
+    assert np.allclose(found.mode.states[:, 0], found.mode.states[:, 1], rtol=0, atol=1e-9)
+    covariance = covariance_of(found)
     assert covariance[-1, 0, 0] == pytest.approx(4032.15794, abs=1e-5)
     assert np.allclose(covariance[:, 0, 1], 0.0, atol=1e-9)
 
@@ -165,7 +165,11 @@ ORACLE = {
 def test_irregular_times_against_a_dense_normal(step_hours):
     """x0 ~ N(0, 10^2), sigma = 2: log p = -14.2552821374 (scipy, dense covariance)."""
     hours = ORACLE["hours"]
-    grid = hours if step_hours is None else time_grid(hours, step_hours, np.zeros(0))
+    grid = (
+        hours
+        if step_hours is None
+        else time_grid(hours, step_hours, np.zeros(0), SAME_MOMENT_HOURS)
+    )
     problem = problem_of(
         hours,
         np.stack([ORACLE["seen"]] * 2, axis=1),
@@ -173,9 +177,9 @@ def test_irregular_times_against_a_dense_normal(step_hours):
         hours=grid,
         start=start_prior(sd_km=10.0),
     )
-    mode = mode_of(problem, [np.log(2.0), 0.0], hours)
-    assert -mode.negative_log_marginal / 2 == pytest.approx(-14.2552821374, abs=1e-9)
-    assert mode.newton_steps == 1
+    found = approximation_of(problem, [np.log(2.0), 0.0], hours)
+    assert -found.negative_log_marginal / 2 == pytest.approx(-14.2552821374, abs=1e-9)
+    assert found.mode.newton_steps == 1
 
 
 def bridge(first_km, last_km, sd_km):
@@ -186,8 +190,8 @@ def bridge(first_km, last_km, sd_km):
         hours=np.arange(61.0),
         start=start_prior(sd_km=1e7),
     )
-    mode = mode_of(problem, [np.log(10.0), 0.0], [0.0, 60.0])
-    return mode.states[15], covariance_of(problem, mode)[15]
+    found = approximation_of(problem, [np.log(10.0), 0.0], [0.0, 60.0])
+    return found.mode.states[15], covariance_of(found)[15]
 
 
 def test_inside_a_gap_the_path_is_a_brownian_bridge():
@@ -250,7 +254,7 @@ def test_linear_drift_against_a_dense_normal():
     """Preference, current, push, error ellipses and scale: all at once, from scipy's density."""
     rng = np.random.default_rng(3)
     fix_hours = np.sort(rng.uniform(0, 12, 14))
-    hours = time_grid(fix_hours, 0.25, np.zeros(0))
+    hours = time_grid(fix_hours, 0.25, np.zeros(0), SAME_MOMENT_HOURS)
     covariance = random_covariances(rng, 14)
     seen = rng.normal(size=(14, 2)) * 4
     A, push = np.array([[-0.3, -0.8], [0.8, -0.9]]), (0.7, -0.4)
@@ -265,7 +269,7 @@ def test_linear_drift_against_a_dense_normal():
     )
     theta = linear_theta(1.2, 0.3, 0.9, 0.8, push)
     theta[-1] = np.log(1.3)
-    mode = mode_of(problem, theta, fix_hours)
+    found = approximation_of(problem, theta, fix_hours)
     mean, cov = euler_normal(hours, A, push, 1.2, [1.0, -2.0], 9.0)
     at = nearest_state(hours, fix_hours)
     rows = (2 * at[:, None] + [0, 1]).ravel()
@@ -273,16 +277,16 @@ def test_linear_drift_against_a_dense_normal():
     seen_cov = cov[np.ix_(rows, rows)] + noise
     expected = scipy.stats.multivariate_normal(mean[rows], seen_cov).logpdf(seen.ravel())
     # the layers reach 80 km where splines round at 1e-14
-    assert -mode.negative_log_marginal == pytest.approx(expected, abs=1e-8)
+    assert -found.negative_log_marginal == pytest.approx(expected, abs=1e-8)
     gain = cov[:, rows] @ np.linalg.inv(seen_cov)
     assert np.allclose(
-        mode.states.ravel(), mean + gain @ (seen.ravel() - mean[rows]), rtol=0, atol=1e-8
+        found.mode.states.ravel(), mean + gain @ (seen.ravel() - mean[rows]), rtol=0, atol=1e-8
     )
     after = cov - gain @ cov[rows]
-    found = covariance_of(problem, mode)
+    spread = covariance_of(found)
     for i in range(len(hours)):
         block = after[2 * i : 2 * i + 2, 2 * i : 2 * i + 2]
-        assert np.allclose(found[i], block, rtol=0, atol=1e-9)
+        assert np.allclose(spread[i], block, rtol=0, atol=1e-9)
 
 
 def prior_covariance(theta, step_hours, last_hour):
@@ -297,7 +301,7 @@ def prior_covariance(theta, step_hours, last_hour):
         layers=LINEAR_LAYERS,
         start=start_prior(sd_km=1.0),
     )
-    return covariance_of(problem, mode_of(problem, theta, ends))[-1]
+    return covariance_of(approximation_of(problem, theta, ends))[-1]
 
 
 def test_eulers_stationary_variance():
@@ -340,68 +344,135 @@ def test_preference_and_rotating_current_settle_to_their_law(pulls, turn, contin
 # --- a dense twin of the whole engine (engine_twin.py) ---------------------------------------
 
 
-@pytest.fixture(scope="module")
-def twin():
-    return Twin()
+@pytest.fixture(scope="module", params=["diffusive", "persistent"])
+def twin(request):
+    return Twin(persistent=request.param == "persistent")
 
 
 @pytest.fixture(scope="module")
-def twin_mode(twin):
-    return mode_of(twin.problem, THETA, twin.fix_hours)
+def theta(twin):
+    return PERSISTENT_THETA if twin.persistent else THETA
 
 
-def test_the_twin_is_hard_enough(twin, twin_mode):
+@pytest.fixture(scope="module")
+def twin_found(twin, theta):
+    return approximation_of(twin.problem, theta, twin.fix_hours, 1e-16)
+
+
+@pytest.fixture(scope="module")
+def flat(twin, theta, twin_found):
+    """The twin's own mode, by dense Newton steps from the engine's."""
+    return twin.mode(jnp.asarray(theta), twin_found.mode.states)
+
+
+def test_the_twin_is_hard_enough(twin, twin_found):
     """Its Hessian bends: without the curvature of the drift the marginal is another one."""
-    assert np.abs(np.asarray(twin_mode.evaluation.curvature)).max() > 0.05
+    mode = twin_found.mode
+    plain = factor(mode.point.band(twin.problem, mode.sites, exact=False))
+    # a million times the tolerances below
+    assert abs(plain.log_det - mode.cholesky.log_det) > 0.01
+    assert np.abs(np.asarray(mode.point.evaluation.curvature)).max() > 0.04
     assert len(np.unique(twin.state)) == len(twin.state) - 1
-    assert twin_mode.newton_steps > 2
+    assert twin_found.mode.newton_steps > 2
+    if twin.persistent:
+        assert set(twin.spell) == {0, 1, 2}
+        assert np.array_equal(np.asarray(twin.problem.track.steps.spell)[: len(twin.spell)],
+                              twin.spell)  # fmt: skip
 
 
-def test_the_mode_and_the_marginal_likelihood(twin, twin_mode):
-    flat = twin.mode(jnp.asarray(THETA), twin_mode.states)
-    assert np.allclose(flat, twin_mode.states.ravel(), rtol=0, atol=1e-8)
-    expected = float(twin.negative_log_marginal(jnp.asarray(THETA), flat))
-    assert twin_mode.negative_log_marginal == pytest.approx(expected, abs=1e-8)
+def test_the_mode_and_the_marginal_likelihood(twin, theta, twin_found, flat):
+    assert np.allclose(flat, twin_found.mode.states.ravel(), rtol=0, atol=1e-8)
+    expected = float(twin.negative_log_marginal(jnp.asarray(theta), flat))
+    assert twin_found.negative_log_marginal == pytest.approx(expected, abs=1e-8)
 
 
-def test_gradient_and_hessian_of_the_states_away_from_the_mode(twin):
+def test_gradient_and_hessian_of_the_states_away_from_the_mode(twin, theta):
     rng = np.random.default_rng(9)
-    states = np.cumsum(rng.normal(size=(twin.problem.n_states, 2)), axis=0)
-    sightings, _ = twin.problem.observations.gathered(THETA[-1], twin.problem.padded)
-    at = laplace._evaluate(twin.problem, jnp.asarray(THETA[:-1]), states, sightings)
-    n = twin.problem.n_states
-    flat, theta = jnp.asarray(states.ravel()), jnp.asarray(THETA)
+    states = np.cumsum(rng.normal(size=(twin.problem.n_states, twin.problem.dim)), axis=0)
+    sites = twin.problem.observations.gaussian_sites(twin.problem.error_parameters(theta)[0])
+    point = evaluate_at(twin.problem, theta, states)
+    flat, theta = jnp.asarray(states.ravel()), jnp.asarray(theta)
     gradient, hessian = twin.gradient(flat, theta), twin.hessian(flat, theta)
     scale = float(jnp.abs(hessian).max())
-    assert np.allclose(np.asarray(at.gradient)[:n].ravel(), gradient, rtol=0, atol=1e-9 * scale)
-    assert np.allclose(dense(np.asarray(at.band)[:n]), hessian, rtol=0, atol=1e-9 * scale)
+    found = point.full_gradient(twin.problem, sites).ravel()
+    assert np.allclose(found, gradient, rtol=0, atol=1e-9 * scale)
+    assert np.allclose(dense(point.band(twin.problem, sites)), hessian, rtol=0, atol=1e-9 * scale)
 
 
-def test_the_gradient_of_the_marginal_likelihood_is_exact(twin, twin_mode):
-    found = marginal_gradient(twin.problem, twin_mode).gradient
-    expected = twin.marginal_gradient(jnp.asarray(THETA), jnp.asarray(twin_mode.states.ravel()))
-    assert np.allclose(found, expected, rtol=1e-8, atol=1e-8)
+def test_the_gradient_of_the_marginal_likelihood_is_exact(twin, theta, twin_found, flat):
+    expected = twin.marginal_gradient(jnp.asarray(theta), flat)
+    assert np.allclose(twin_found.gradient(), expected, rtol=1e-8, atol=1e-8)
 
 
-def test_how_the_mode_moves_with_the_parameters(twin, twin_mode):
-    found = mode_sensitivity(twin.problem, twin_mode)
-    expected = twin.sensitivity(jnp.asarray(THETA), jnp.asarray(twin_mode.states.ravel()))
+def test_how_the_mode_moves_with_the_parameters(twin, theta, twin_found, flat):
+    found = mode_sensitivity(twin.problem, twin_found.mode)
+    expected = twin.sensitivity(jnp.asarray(theta), flat)
     assert np.allclose(found.reshape(expected.shape), expected, rtol=1e-8, atol=1e-8)
 
 
-def test_the_covariance_of_the_states(twin, twin_mode):
-    inverse = np.linalg.inv(twin.hessian(jnp.asarray(twin_mode.states.ravel()), jnp.asarray(THETA)))
-    n = twin.problem.n_states
-    expected = inverse.reshape(n, 2, n, 2)[np.arange(n), :, np.arange(n)]
-    assert np.allclose(covariance_of(twin.problem, twin_mode), expected, rtol=0, atol=1e-10)
+def dense_covariances(twin, theta, flat):
+    """The inverse Hessian, indexed [state, quantity, state, quantity]."""
+    n, dim = twin.problem.n_states, twin.problem.dim
+    return np.linalg.inv(twin.hessian(flat, jnp.asarray(theta))).reshape(n, dim, n, dim)
+
+
+def test_the_covariance_of_the_states(twin, theta, twin_found, flat):
+    n = np.arange(twin.problem.n_states)
+    expected = dense_covariances(twin, theta, flat)[n, :, n]
+    assert np.allclose(covariance_of(twin_found), expected, rtol=0, atol=1e-10)
+    at = np.array([3, 0, 7])
+    assert np.allclose(twin_found.spread.covariance_at(at), expected[at, :2, :2], atol=1e-10)
+
+
+def test_the_covariance_of_the_linearised_residuals(twin, theta, twin_found, flat):
+    """Of r = z' - J z with itself and with z, from neighbours in the dense inverse."""
+    whole = dense_covariances(twin, theta, flat)
+    problem, point = twin.problem, twin_found.mode.point
+    linear = linear_steps(problem.motion, problem.process_parameters(theta), point.z, point.basis,
+                          problem.track)  # fmt: skip
+    steps = twin_found.spread.steps
+    for i in range(problem.n_states - 1):
+        J = np.asarray(linear.jacobian)[..., i]
+        before, after = whole[i, :, i], whole[i + 1, :, i + 1]
+        along = whole[i + 1, :, i]
+        cross = along - J @ before
+        residual = after - J @ along.T - along @ J.T + J @ before @ J.T
+        assert np.allclose(steps.cross[..., i], cross, rtol=0, atol=1e-10)
+        assert np.allclose(steps.residual[..., i], residual, rtol=0, atol=1e-10)
+
+
+def test_the_adjoint_corrects_the_mode_to_the_mean(twin, theta, twin_found, flat):
+    """-inv(H) times the gradient of 1/2 log det H in the states (Tierney, Kass & Kadane 1989)."""
+    inverse = jnp.linalg.inv(twin.hessian(flat, jnp.asarray(theta)))
+    slope = 0.5 * jnp.einsum("ij,ijk->k", inverse, twin.third(flat, jnp.asarray(theta))[0])
+    assert float(jnp.abs(slope).max()) > 0.01
+    expected = -(inverse @ slope).reshape(twin_found.spread.adjoint.shape)
+    assert np.allclose(twin_found.spread.adjoint, expected, rtol=1e-8, atol=1e-9)
 
 
 # --- finite differences on rough layers ------------------------------------------------------
 
+FULL_THETA = {
+    "diffusive": [np.log(1.5), 20.0, -8.0, 15.0, -0.5, 0.7, 0.2],
+    "persistent": [np.log(1.5), np.log(3.0), 20.0, -8.0, 15.0, -0.5, 0.7, 0.2],
+}
+NAMES = ["z", "z^2", "changing", "distance", "drift", "scale"]
+CHECKED = [
+    *(("diffusive", i, name) for i, name in enumerate(["diffusion", *NAMES])),
+    *(("persistent", i, name) for i, name in enumerate(["speed", "persistence", *NAMES])),
+    *(("persistent", i, f"spell {i - 7}") for i in (8, 12, 21)),
+]
+EACH = pytest.mark.parametrize(
+    ("kind", "j"), [c[:2] for c in CHECKED], ids=[f"{c[0]} {c[2]}" for c in CHECKED]
+)
 
-@pytest.fixture(scope="module")
-def full():
-    """Two layers (one humped, one changing), a distance, a current, a scale, turned ellipses."""
+
+@functools.cache
+def full(kind):
+    """Two layers (one humped, one changing), a distance, a current, a scale, turned ellipses.
+
+    Persistent motion has fourteen spells of a pace of their own besides.
+    """
     layers = (bumpy_layer(1), bumpy_layer(2, times=12), None)
     water = bumpy_layer(3, times=12, components=2)
     field = VelocityField(
@@ -413,71 +484,59 @@ def full():
         fit_spline(water),
     )
     rng = np.random.default_rng(1)
-    fix_hours = np.sort(rng.random(60) * 290)
+    # no step under 0.1 h: at one of 7 s persistent motion's values round at 2e-7, and their
+    # differences say nothing
+    fix_hours = np.sort(np.round(rng.random(60) * 290, 1))
     at_km = np.cumsum(rng.normal(size=(60, 2)) * 4, axis=0)
+    persistent = kind == "persistent"
+    motion = Persistent() if persistent else Diffusive()
     problem = problem_of(
         fix_hours,
         at_km,
         random_covariances(rng, 60, 0.3),
-        hours=time_grid(fix_hours, 0.5, np.arange(300.0)),
+        hours=time_grid(fix_hours, 0.5, np.arange(300.0), motion.same_moment_hours),
         field=field,
         layers=(layers, water),
+        motion=motion,
+        pace=PacePrior(0.5, 20.0, 40.0) if persistent else None,
     )
-    theta = np.array([np.log(1.5), 20.0, -8.0, 15.0, -0.5, 0.7, 0.2])
-    return problem, theta, mode_of(problem, theta, fix_hours)
+    spells = problem.pace.spells if persistent else 0
+    theta = np.concatenate([FULL_THETA[kind], rng.normal(size=spells)])
+    assert len(theta) == problem.n_parameters
+    return problem, theta, approximation_of(problem, theta, fix_hours, 1e-14)
 
 
-NAMES = ["diffusion", "z", "z^2", "changing", "distance", "drift", "scale"]
-
-
-def cells_of(states):
-    """The layers' cell of every state; layers and current share one grid."""
-    return np.floor((states + 118.0) / 4.0)
-
-
-def quiet_step(full, j):
-    """The longest step of 1e-3, 1e-3/4, ... over which no state leaves its cell.
-
-    Third derivatives jump from cell to cell and the Hessian with them, so that the marginal
-    likelihood has tiny steps; its gradient is the one between them.
-    """
-    problem, theta, mode = full
-    step = 1e-3 * max(1.0, abs(theta[j]))
-    while True:
-        moved = [find_moved(full, j, multiple * step).states for multiple in (-2, 2)]
-        if all(np.array_equal(cells_of(m), cells_of(mode.states)) for m in moved):
-            return step
-        step /= 4.0
-
-
-def find_moved(full, j, change):
-    problem, theta, mode = full
+def find_moved(kind, j, change):
+    problem, theta, found = full(kind)
     moved = theta.copy()
     moved[j] += change
     # a decrement of 1e-16: states to 1e-8, values to rounding
-    return find_mode(problem, moved, mode.states, 1e-16)
+    return approximate(problem, moved, Warm(found.mode.states), 1e-16)
 
 
-@pytest.mark.parametrize("j", range(7), ids=NAMES)
-def test_the_gradient_against_differences_of_the_marginal_likelihood(full, j):
-    problem, _, mode = full
-    step = quiet_step(full, j)
-    v = {m: find_moved(full, j, m * step).negative_log_marginal for m in (-2, -1, 1, 2)}
-    slope = (8.0 * (v[1] - v[-1]) - (v[2] - v[-2])) / (12.0 * step)
+def five_point(function, step):
+    v = {m: function(m * step) for m in (-2, -1, 1, 2)}
+    return (8.0 * (v[1] - v[-1]) - (v[2] - v[-2])) / (12.0 * step)
+
+
+@EACH
+def test_the_gradient_against_differences_of_the_marginal_likelihood(kind, j):
+    """Everything at once; where a path crosses a cell only the second derivative jumps."""
+    _, theta, found = full(kind)
+    step = 1e-4 * max(1.0, abs(theta[j]))
+    slope = five_point(lambda d: find_moved(kind, j, d).negative_log_marginal, step)
     # values near 1e3 round at 2e-13: over the step that is the rest of the tolerance
-    assert marginal_gradient(problem, mode).gradient[j] == pytest.approx(
-        slope, rel=1e-5, abs=1e-12 / step
-    )
+    assert found.gradient()[j] == pytest.approx(slope, rel=1e-6, abs=1e-12 / step)
 
 
-@pytest.mark.parametrize("j", range(7), ids=NAMES)
-def test_the_sensitivity_against_differences_of_the_mode(full, j):
-    problem, _, mode = full
-    step = quiet_step(full, j)
-    slope = (find_moved(full, j, step).states - find_moved(full, j, -step).states) / (2.0 * step)
-    found = mode_sensitivity(problem, mode)[..., j]
+@EACH
+def test_the_sensitivity_against_differences_of_the_mode(kind, j):
+    problem, theta, found = full(kind)
+    step = 1e-3 * max(1.0, abs(theta[j]))
+    slope = five_point(lambda d: find_moved(kind, j, d).mode.states, step)
+    expected = mode_sensitivity(problem, found.mode)[..., j]
     # the modes' own precision over the step
-    assert np.abs(found - slope).max() < 1e-4 * np.abs(slope).max()
+    assert np.abs(expected - slope).max() < 1e-5 * np.abs(slope).max()
 
 
 # --- fixes, padding, fallbacks ---------------------------------------------------------------
@@ -490,17 +549,17 @@ def test_fixes_of_one_moment_are_one_fix_of_their_joint_information():
     seen, covariance = rng.normal(size=(5, 2)), random_covariances(rng, 5)
     shared = problem_of(hours, seen, covariance, hours=[0.0, 1.0, 2.0], start=start_prior())
     theta = np.array([0.3, 0.2])
-    mode = mode_of(shared, theta, hours)
+    found = approximation_of(shared, theta, hours)
     mean, cov = euler_normal([0.0, 1.0, 2.0], np.zeros((2, 2)), (0, 0), np.exp(0.3), [0, 0], 100.0)
     rows = (2 * np.array([0, 1, 1, 1, 2])[:, None] + [0, 1]).ravel()
     noise = np.exp(0.4) * scipy.linalg.block_diag(*covariance)
     expected = scipy.stats.multivariate_normal(mean[rows], cov[np.ix_(rows, rows)] + noise).logpdf(
         seen.ravel()
     )
-    assert -mode.negative_log_marginal == pytest.approx(expected, abs=1e-9)
+    assert -found.negative_log_marginal == pytest.approx(expected, abs=1e-9)
 
 
-def test_the_order_of_the_fixes_does_not_matter(twin, twin_mode):
+def test_the_order_of_the_fixes_does_not_matter(twin, theta, twin_found):
     order = np.random.default_rng(0).permutation(len(twin.fix_hours))
     turned = problem_of(
         twin.fix_hours[order],
@@ -510,15 +569,12 @@ def test_the_order_of_the_fixes_does_not_matter(twin, twin_mode):
         field=TWIN_FIELD,
         layers=TWIN_LAYERS,
         start=twin.start,
+        motion=twin.motion,
+        pace=PACE if twin.persistent else None,
     )
-    mode = mode_of(turned, THETA, twin.fix_hours[order])
-    assert mode.negative_log_marginal == pytest.approx(twin_mode.negative_log_marginal, abs=1e-9)
-    assert np.allclose(
-        marginal_gradient(turned, mode).gradient,
-        marginal_gradient(twin.problem, twin_mode).gradient,
-        rtol=0,
-        atol=1e-8,
-    )
+    found = approximation_of(turned, theta, twin.fix_hours[order], 1e-16)
+    assert found.negative_log_marginal == pytest.approx(twin_found.negative_log_marginal, abs=1e-9)
+    assert np.allclose(found.gradient(), twin_found.gradient(), rtol=0, atol=1e-8)
 
 
 def test_the_default_start_is_vague_around_the_earliest_fix():
@@ -536,14 +592,9 @@ def test_padding_changes_nothing(states):
     theta = np.array([0.1, 0.0])
     whole = problem_of(fix_hours, seen, isotropic([1, 2, 1]), hours=np.arange(float(states)))
     bare = problem_of(fix_hours, seen, isotropic([1, 2, 1]))
-    modes = [mode_of(p, theta, fix_hours) for p in (whole, bare)]
-    gradients = [
-        marginal_gradient(p, m).gradient for p, m in zip((whole, bare), modes, strict=True)
-    ]
-    assert modes[0].negative_log_marginal == pytest.approx(
-        modes[1].negative_log_marginal, rel=1e-11
-    )
-    assert gradients[0] == pytest.approx(gradients[1], rel=1e-9)
+    one, other = (approximation_of(p, theta, fix_hours) for p in (whole, bare))
+    assert one.negative_log_marginal == pytest.approx(other.negative_log_marginal, rel=1e-11)
+    assert one.gradient() == pytest.approx(other.gradient(), rel=1e-9)
     assert whole.padded >= states
 
 
@@ -567,21 +618,21 @@ def test_gauss_newton_takes_over_where_the_hessian_is_indefinite(monkeypatch):
         layers=layers,
     )
     fell_back = []
-    plain = laplace._factor_guarded
+    plain = Point.factored
 
-    def watched(problem, at):
-        made = plain(problem, at)
+    def watched(point, problem, sites):
+        made = plain(point, problem, sites)
         fell_back.append(not made[2])
         return made
 
-    monkeypatch.setattr(laplace, "_factor_guarded", watched)
-    mode = mode_of(problem, [np.log(2.0), strength, 0.0], fix_hours)
+    monkeypatch.setattr(Point, "factored", watched)
+    found = approximation_of(problem, [np.log(2.0), strength, 0.0], fix_hours)
     assert any(fell_back)
     assert not fell_back[-1]
-    gradient = np.asarray(mode.evaluation.gradient)[: problem.n_states]
+    gradient = found.mode.point.full_gradient(problem, found.mode.sites)
     # a decrement of 1e-12 with curvatures up to 1e3
     assert np.abs(gradient).max() < 1e-4
-    assert np.linalg.eigvalsh(dense(mode.band)).min() > 0
+    assert np.linalg.eigvalsh(dense(found.mode.band)).min() > 0
 
 
 @pytest.mark.parametrize(
@@ -596,45 +647,72 @@ def test_no_mode_at_impossible_parameters(theta, message):
     hours = np.arange(4.0)
     problem = problem_of(hours, np.eye(4)[:, :2], isotropic(np.ones(4)))
     with pytest.raises(ModeNotFound, match=message), np.errstate(all="ignore"):
-        mode_of(problem, theta, hours)
+        approximation_of(problem, theta, hours)
 
 
-def test_no_mode_where_newton_may_not_iterate(monkeypatch, full):
-    problem, theta, mode = full
+def test_no_mode_where_newton_may_not_iterate(monkeypatch):
+    problem, theta, found = full("diffusive")
     monkeypatch.setattr(laplace, "MAX_NEWTON", 1)
     with pytest.raises(ModeNotFound, match="did not settle in 1 steps"):
-        find_mode(problem, theta, mode.states + 3.0)
+        find_mode(problem, theta, found.mode.sites, found.mode.states + 3.0)
 
 
 # --- the grid of times -----------------------------------------------------------------------
 
 hour_lists = st.lists(st.floats(0.0, 50.0), min_size=1, max_size=12)
+ROUNDING_HOURS = 1e-9
+"""Hours since 1970 hold 6e-11 h."""
 
 
-@given(hour_lists, st.sampled_from([0.1, 0.25, 0.5, 1.0, 7.0]), hour_lists)
-def test_the_grid_is_the_union_of_fixes_steps_and_reports(fixes, step_hours, reports):
-    fixes, reports = 4e5 + np.array(fixes), 4e5 + np.array(reports)
-    grid = time_grid(fixes, step_hours, reports)
-    assert (np.diff(grid) > SAME_MOMENT_HOURS).all()
-    assert grid[0] == fixes.min()
-    assert fixes.max() - SAME_MOMENT_HOURS <= grid[-1] <= fixes.max()
-    whole = np.arange(np.ceil(grid[0] / step_hours), grid[-1] / step_hours) * step_hours
-    inside = reports[(reports >= grid[0]) & (reports <= grid[-1])]
-    wanted = np.concatenate([fixes, whole, inside])
-    assert np.diff(grid).max(initial=0.0) <= step_hours + SAME_MOMENT_HOURS
-    apart = np.abs(wanted[:, None] - grid[None]).min(axis=1)
-    assert apart.max() <= SAME_MOMENT_HOURS
-    assert np.abs(grid[:, None] - wanted[None]).min(axis=1).max() == 0.0
-    near = grid[nearest_state(grid, wanted)]
-    assert np.allclose(np.abs(near - wanted), apart, rtol=0, atol=1e-12)
+@given(
+    hour_lists,
+    st.sampled_from([0.1, 0.25, 0.5, 1.0, 7.0]),
+    st.sampled_from([0.2, 1.0, 4.0]),
+    st.sampled_from([Diffusive, Persistent]),
+)
+def test_the_grid_holds_fixes_and_reports_and_the_steps_that_do_not_crowd_them(
+    fixes, step_hours, report_every, motion
+):
+    fixes = 4e5 + np.array(fixes)
+    same = motion.same_moment_hours
+    first, last = fixes.min(), fixes.max()
+    reports = np.arange(np.ceil(first / report_every), last / report_every) * report_every
+    grid = time_grid(fixes, step_hours, reports, same)
+    crowded = max(CROWDED_SHARE * step_hours, same)
+    steps = np.arange(np.ceil(first / step_hours), np.floor(last / step_hours) + 1) * step_hours
+    assert (grid[0], grid[-1]) == (first, pytest.approx(last, abs=same))
+    assert np.diff(grid).min(initial=np.inf) >= min(same, report_every) - ROUNDING_HOURS
+
+    def away(times, others):
+        return np.abs(np.subtract.outer(times, others)).min(axis=1, initial=np.inf)
+
+    # nothing is made up; fixes and reports are there or a moment away
+    assert away(grid, np.concatenate([fixes, reports, steps])).max() == 0.0
+    assert away(fixes, grid).max() < same
+    assert away(reports, grid).max(initial=0.0) < same
+    # a report that is not there is at a fix; a step that is not there crowds a fix or a report
+    missing = reports[away(reports, grid) > 0.0]
+    assert away(missing, fixes).max(initial=0.0) < same
+    left_out = steps[away(steps, grid) > 0.0]
+    held = np.concatenate([fixes, reports])
+    assert away(left_out, held).max(initial=0.0) < crowded + ROUNDING_HOURS
+    # a step is left out on each side of two held times at most
+    assert np.diff(grid).max(initial=0.0) < step_hours + 2.0 * crowded + ROUNDING_HOURS
+
+
+def test_the_longest_step_is_one_and_a_fifth():
+    """Held times just before and just after a step's two ends leave both ends out."""
+    grid = time_grid(np.array([-0.09, 1.09]), 1.0, np.zeros(0), SAME_MOMENT_HOURS)
+    assert grid.tolist() == [-0.09, 1.09]
 
 
 def test_many_fixes_a_second_are_not_one_moment():
     """Fixes 0.3 s apart for a minute: each within half a second of its own state."""
     fixes = 4e5 + np.arange(200) * 0.3 / 3600
-    grid = time_grid(fixes, 0.5, np.zeros(0))
+    grid = time_grid(fixes, 0.5, np.zeros(0), SAME_MOMENT_HOURS)
     apart = np.abs(grid[nearest_state(grid, fixes)] - fixes)
     assert apart.max() <= SAME_MOMENT_HOURS
+    assert len(grid) == 100
 
 
 def test_nearest_states():

@@ -116,7 +116,7 @@ def test_fixed_and_estimated_shares_and_scales(demo, tmp_path):
     model = built(demo, tmp_path, current__drift="0.25", errors__scale="1.5")
     drift, scale = model.base.parameters.all[-2:]
     assert (drift.fixed, drift.start) == (True, 0.25)
-    assert (scale.fixed, scale.natural(scale.start)) == (True, pytest.approx(1.5))
+    assert (scale.fixed, np.exp(scale.start)) == (True, pytest.approx(1.5))
     loose = built(demo, tmp_path / "b", errors__scale='"estimated"').base.parameters.all[-1]
     assert (loose.fixed, loose.start, loose.prior_sd) == (False, 0.0, SCALE_PRIOR_LOG_SD)
 
@@ -141,7 +141,7 @@ def test_a_flat_layer_teaches_nothing(demo, tmp_path):
 def test_each_track_starts_from_its_own_pace(demo, model):
     for tag, data in demo.prepared.tracks.items():
         first, *rest = model.for_track(data).parameters.all
-        assert first.natural(first.start) == pytest.approx(typical_diffusion(data))
+        assert np.exp(first.start) == pytest.approx(typical_diffusion(data))
         assert tuple(rest) == model.base.parameters.all[1:]
         assert first.prior_mean == model.base.parameters.all[0].prior_mean, tag
 

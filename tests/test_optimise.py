@@ -186,4 +186,16 @@ def test_the_penalty_is_a_normal_density():
     assert many.full(np.array([9.0, 8.0])).tolist() == [9.0, 7.0, 8.0]
     value, slope = many.penalty(np.array([2.5, 1e3]))
     assert (value, slope.tolist()) == (0.5, [0.5, 0.0])
-    assert [p.natural(0.0) for p in many.all] == [0.0, 0.0, 1.0]
+
+
+def test_spells_are_added_once_with_a_standard_normal_prior():
+    from engine_standins import parameter
+
+    plain = ParameterSet((parameter("a", start=1.0), parameter("b", fixed=True, start=7.0)))
+    assert plain.with_spells(0) == plain
+    many = plain.with_spells(3)
+    assert many.with_spells(3) == many
+    assert [p.reported for p in many.all] == [True, True, False, False, False]
+    assert many.free_at.tolist() == [0, 2, 3, 4]
+    value, slope = many.penalty(np.array([9.0, 1.0, -2.0, 0.0]))
+    assert (value, slope.tolist()) == (2.5, [0.0, 1.0, -2.0, 0.0])

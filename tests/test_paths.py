@@ -6,6 +6,8 @@ import numpy as np
 import pandas as pd
 import pytest
 from engine_standins import (
+    approximation_of,
+    covariance_of,
     isotropic,
     problem_of,
     quick_fit,
@@ -19,8 +21,10 @@ from pyproj import Geod
 
 from trackfit.frame import Plane
 from trackfit.inference.fit import FitStatus, States, TrackData
-from trackfit.inference.grid import interpolated_start, time_grid
-from trackfit.inference.laplace import find_mode, marginal_gradient, mode_sensitivity
+from trackfit.inference.grid import time_grid
+from trackfit.inference.integrate import PathMixture, WeightedPoints
+from trackfit.inference.laplace import mode_sensitivity
+from trackfit.motion import Diffusive
 from trackfit.paths import (
     FilledTrack,
     fill_track,
@@ -89,7 +93,9 @@ def test_the_columns_and_their_types(fit):
 
 def test_one_row_for_every_hour_and_every_fix(fit):
     hours = hours_since_1970(filled(fit).table["time"])
-    expected = EPOCH_H + np.sort(np.r_[np.arange(1.0, 34.0), 0.3, 5.4, 20.5, 33.75])
+    # the fix a third of a second after two o'clock stands for both
+    on_the_hour = np.r_[1.0, np.arange(3.0, 34.0)]
+    expected = EPOCH_H + np.sort(np.r_[on_the_hour, 0.3, 2.0 + 0.3 / 3600, 5.4, 20.5, 33.75])
     assert np.allclose(hours, expected, rtol=0, atol=1e-9)
 
 
@@ -101,7 +107,7 @@ def test_hours_to_the_nearest_fix_gaps_and_fixes(fit):
         at_fix = away.min() < 0.5 / 3600
         assert row.at_fix == at_fix
         assert row.hours_to_fix == pytest.approx(0.0 if at_fix else away.min(), abs=1e-6)
-        before, after = FIX_HOURS[FIX_HOURS <= hour], FIX_HOURS[FIX_HOURS >= hour]
+        before, after = FIX_HOURS[hour >= FIX_HOURS], FIX_HOURS[hour <= FIX_HOURS]
         wide = not at_fix and after.min() - before.max() > 12.0
         assert row.in_gap == wide
     assert table["at_fix"].sum() == 7
@@ -119,7 +125,7 @@ def test_positions_and_ellipses_are_those_of_the_states(fit):
     table = filled(fit).table
     at = np.searchsorted(fit.states.problem.hours, hours_since_1970(table["time"]) - 1e-6)
     xy = PLANE.to_plane(table["lon"], table["lat"])
-    assert np.allclose(xy, fit.states.mode.states[at], rtol=0, atol=1e-6)
+    assert np.allclose(xy, fit.states.mean[at], rtol=0, atol=1e-6)
     cov = fit.states.total_covariance()[at] * 1e6
     values, vectors = np.linalg.eigh(cov)
     # distances this near the centre are true to 1e-5
@@ -231,13 +237,12 @@ def known(data: TrackData, hours, theta) -> States:
     problem = problem_of(
         data.hours, data.at_km, data.covariance_km2, hours=hours, start=start_prior(sd_km=20.0)
     )
-    mode = find_mode(problem, theta, interpolated_start(hours, data.hours, data.at_km, 2))
-    blocks = np.asarray(marginal_gradient(problem, mode).inverse.covariance)
+    found = approximation_of(problem, theta, data.hours)
     return States(
-        problem=problem,
-        mode=mode,
-        covariance=np.moveaxis(blocks, -1, 0)[: problem.n_states],
-        sensitivity=mode_sensitivity(problem, mode)[..., :1],
+        approximation=found,
+        covariance=covariance_of(found),
+        sensitivity=mode_sensitivity(problem, found.mode)[..., :1],
+        free_at=np.array([0]),
         theta=theta[:1],
         theta_covariance=1e-20 * np.eye(1),
     )
@@ -251,7 +256,7 @@ def test_ellipses_cover_simulated_truth(fit):
     """
     rng = np.random.default_rng(6)
     data, theta = uneven(), np.array([np.log(1.7), np.log(1.2)])
-    hours = time_grid(data.hours, 1.0, np.zeros(0))
+    hours = time_grid(data.hours, 1.0, np.zeros(0), Diffusive.same_moment_hours)
     roots = 1.2 * np.linalg.cholesky(data.covariance_km2)
     at_fix = np.searchsorted(hours, data.hours - 1e-3)
     rows = None
@@ -273,6 +278,36 @@ def test_ellipses_cover_simulated_truth(fit):
     for column in held.T:
         assert 0.926 < np.mean(column <= 5.991464547) < 0.971
         assert 0.448 < np.mean(column <= 1.386294361) < 0.552
+
+
+def test_a_mixture_of_parameters_widens_positions_and_ellipses(fit):
+    """Two points of equal weight: one path moved by 3 km east, its covariance nine times as large.
+
+    Region and centre are those of the mixture; the shape is that of its covariance.
+    """
+    states = fit.states
+    means = np.stack([states.mean[:, :2], states.mean[:, :2] + [3.0, 0.0]])
+    spread = states.covariance[:, :2, :2]
+    mixture = PathMixture(np.array([0.5, 0.5]), means, np.stack([spread, 9.0 * spread]))
+    points = WeightedPoints(np.zeros((2, 1)), np.array([0.5, 0.5]))
+    mixed = dataclasses.replace(
+        fit, states=dataclasses.replace(states, points=points, mixture=mixture)
+    )
+    table = filled(mixed).table
+    at = np.searchsorted(states.problem.hours, hours_since_1970(table["time"]) - 1e-6)
+    xy = PLANE.to_plane(table["lon"], table["lat"])
+    assert np.allclose(xy, means.mean(axis=0)[at], rtol=0, atol=1e-6)
+    cov = 5.0 * spread[at] + np.diag([2.25, 0.0])
+    assert np.allclose(table["sd_m"], 1e3 * np.sqrt(np.trace(cov, axis1=1, axis2=2) / 2), rtol=1e-4)
+    largest = np.linalg.eigvalsh(cov)[:, 1]
+    for share in (50, 95):
+        radius = np.sqrt(mixture.squared_radius(share / 100)[at])
+        found = table[f"ellipse{share}_major_m"]
+        assert np.allclose(found, 1e3 * radius * np.sqrt(largest), rtol=1e-4)
+    plain = -2.0 * np.log(0.05)
+    # heavier tails than a normal of the same covariance: 50 % sooner, 95 % later
+    assert (mixture.squared_radius(0.95) > plain).any()
+    assert (mixture.squared_radius(0.5) < 1.386294361).all()
 
 
 # --- times ------------------------------------------------------------------------------------

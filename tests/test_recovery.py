@@ -165,8 +165,8 @@ def fitted(case: Case, paths: Paths, track: int) -> Recovered:
     grid = fit.states.problem.hours
     seen = np.rint(grid / (true_hours[1] - true_hours[0])).astype(int)
     at = nearest_state(grid, hourly)
-    off = fit.states.mode.states[at, :2] - true_km[seen[at]]
-    spread = fit.states.total_covariance()[at, :2, :2]
+    off = fit.states.positions_km()[at] - true_km[seen[at]]
+    spread = fit.states.position_covariance_km2()[at]
     return Recovered(
         fit,
         table["estimate"].to_numpy(),

@@ -80,7 +80,7 @@ def test_the_preference_along_the_values_the_path_met(fit):
     assert np.allclose(warmth.h, theta[1] * z + theta[2] * z**2, rtol=0, atol=1e-12)
     assert np.allclose(deep.h, theta[3] * (deep.at + 1.0) / 0.5, rtol=0, atol=1e-12)
     assert np.allclose(home.h, theta[4] * home.at, rtol=0, atol=1e-12)
-    x, y = fit.states.mode.states.T
+    x, y = fit.states.positions_km().T
     assert np.allclose(home.on_path, np.hypot(x - 1.0, y - 2.0), rtol=0, atol=1e-12)
     for response in (warmth, deep, home):
         assert response.on_path.shape == (fit.n_states,)
@@ -98,7 +98,7 @@ def test_the_values_on_the_path_are_the_layers_own(fit):
     layer = fit.model.layers[0][1]
     hours = fit.states.problem.hours
     for i in (0, 30, 59):
-        x, y = (fit.states.mode.states[i] - [layer.x0_km, layer.y0_km]) / layer.spacing_km
+        x, y = (fit.states.positions_km()[i] - [layer.x0_km, layer.y0_km]) / layer.spacing_km
         col, row = int(x), int(y)
         around = layer.values[:, row : row + 2, col : col + 2, 0]
         k = min(int(np.searchsorted(layer.hours, hours[i], side="right")) - 1, 2)

@@ -77,9 +77,8 @@ def test_the_distance_is_softened_at_its_point():
     term = distance_term(3.0, -2.0)
     here = np.asarray(
         term.potential_jet(still(2), jnp.asarray([3.0, 6.0]), jnp.asarray([-2.0, 2.0]), 1)
-    )[0]
+    )[0, :3]
     assert np.allclose(here[0], [SOFTENING_KM, np.sqrt(25 + SOFTENING_KM**2)], rtol=1e-14)
-    assert here.shape == (3, 2)
     assert np.array_equal(here[1:, 0], [0.0, 0.0])
     assert np.allclose(here[1:, 1], np.array([3.0, 4.0]) / here[0, 1], rtol=1e-14)
 
@@ -97,9 +96,18 @@ def test_the_partials_of_the_distance_are_differences_of_lower_ones(orders):
 
 def test_far_away_the_distance_is_the_plain_one():
     term = distance_term(0.0, 0.0)
-    jet = np.asarray(term.potential_jet(still(1), jnp.asarray([3e4]), jnp.asarray([4e4]), 2))[0]
+    jet = np.asarray(term.potential_jet(still(1), jnp.asarray([3e4]), jnp.asarray([4e4]), 2))[0, :6]
     # the softening adds 1/(2 r) = 1e-5 km at 50,000 km
     assert np.allclose(jet[:, 0], [5e4 + 1e-5, 0.6, 0.8, *np.array([16, -12, 9]) / 25 / 5e4])
+
+
+@pytest.mark.parametrize("order", [1, 2, 3, 4])
+def test_the_jet_of_the_distance_has_the_rows_that_were_asked(order):
+    place = (still(1), jnp.asarray([3.0]), jnp.asarray([4.0]))
+    found = np.asarray(distance_term(0.0, 0.0).potential_jet(*place, order))[0]
+    whole = np.asarray(distance_term(0.0, 0.0).potential_jet(*place, 4))[0]
+    assert found.shape == (jet_rows(order), 1)
+    assert np.allclose(found, whole[: jet_rows(order)], rtol=1e-14, atol=0)
 
 
 def test_a_humped_term_holds_the_layer_and_its_square():

@@ -25,9 +25,10 @@ from engine_standins import (
 )
 
 from trackfit.inference.grid import interpolated_start
-from trackfit.inference.laplace import find_mode, marginal_gradient
+from trackfit.inference.marginal import Warm as WarmStart
+from trackfit.inference.marginal import approximate
 from trackfit.layers.splines import fit_spline
-from trackfit.motion import VelocityField
+from trackfit.motion import Diffusive, Persistent, VelocityField
 
 STEP_HOURS = 0.25
 THETA = np.array([np.log(1.5), 5.0, -3.0, -3.0, 2.0, 0.5, 0.0])
@@ -35,7 +36,12 @@ NEAR = THETA + np.array([0.02, 0.2, 0.1, 0.1, 0.1, 0.02, 0.02])
 """A step of a search: every parameter moves."""
 
 
-def track(states: int):
+PERSISTENT = (np.array([np.log(1.5), np.log(2.0), *THETA[1:]]),
+              np.array([np.log(1.5) + 0.02, np.log(2.0) + 0.02, *NEAR[1:]]))  # fmt: skip
+TAIL = (np.log(6.0), np.log(6.3))
+
+
+def track(states: int, persistent: bool = False, heavy: bool = False):
     """Three preference layers (one humped, one changing), a current of two, a fix every 17 states."""
     rng = np.random.default_rng(1)
     last = STEP_HOURS * states
@@ -61,30 +67,36 @@ def track(states: int):
         hours=hours,
         field=field,
         layers=(layers, water),
+        motion=Persistent() if persistent else Diffusive(),
+        heavy=heavy,
     )
-    return problem, interpolated_start(hours, hours[at], seen, 2)
+    return problem, interpolated_start(hours, hours[at], seen, problem.dim)
 
 
 class Warm:
     """An evaluation as a search makes it: from the last mode, at parameters a step away."""
 
-    def __init__(self, states: int) -> None:
-        self.problem, start = track(states)
-        self.mode = find_mode(self.problem, THETA, start)
-        marginal_gradient(self.problem, self.mode)
+    def __init__(self, states: int, persistent: bool = False, heavy: bool = False) -> None:
+        self.problem, start = track(states, persistent, heavy)
+        pair = PERSISTENT if persistent else (THETA, NEAR)
+        self.thetas = [
+            np.append(theta, nu) if heavy else theta for theta, nu in zip(pair, TAIL, strict=True)
+        ]
+        self.found = approximate(self.problem, self.thetas[0], WarmStart(start))
+        self.found.gradient()
         self.turn = 0
 
     def evaluate(self) -> float:
         self.turn += 1
-        theta = NEAR if self.turn % 2 else THETA
+        theta = self.thetas[self.turn % 2]
         begun = time.perf_counter()
-        self.mode = find_mode(self.problem, theta, self.mode.states)
-        marginal_gradient(self.problem, self.mode)
+        self.found = approximate(self.problem, theta, self.found.warm)
+        self.found.gradient()
         return time.perf_counter() - begun
 
     def factor(self) -> float:
         """LAPACK's banded Cholesky alone, on a matrix in its own order."""
-        band = np.asfortranarray(self.mode.band.reshape(-1, 4).T)
+        band = np.asfortranarray(self.found.mode.band.reshape(-1, 2 * self.problem.dim).T)
         begun = time.perf_counter()
         _, info = lapack.dpbtrf(band, lower=1, overwrite_ab=1)
         seconds = time.perf_counter() - begun
@@ -104,11 +116,44 @@ def test_a_warm_evaluation_costs_forty_factorisations_at_most():
     ratio = evaluation / factorisation
     print(
         f"\nwarm marginal likelihood with gradient: {1e3 * evaluation:.0f} ms "
-        f"({warm.mode.newton_steps} Newton steps), one banded factorisation "
+        f"({warm.found.mode.newton_steps} Newton steps), one banded factorisation "
         f"{1e3 * factorisation:.2f} ms, ratio {ratio:.0f} (quickest of each: "
         f"{pairs[:, 0].min() / pairs[:, 1].min():.0f})"
     )
     assert ratio <= 40.0
+
+
+def in_turn(*warm: Warm, rounds: int = 9) -> list[float]:
+    """Median seconds of an evaluation of each, measured in turn."""
+    for one in warm:
+        one.evaluate(), one.evaluate()
+    return list(np.median([[one.evaluate() for one in warm] for _ in range(rounds)], axis=0))
+
+
+@pytest.mark.benchmark
+@pytest.mark.slow
+@pytest.mark.parametrize("persistent", [False, True], ids=["diffusive", "persistent"])
+def test_heavy_tails_cost_three_normal_evaluations_at_most(persistent):
+    plain, heavy = Warm(26_000, persistent), Warm(26_000, persistent, heavy=True)
+    normal_s, heavy_s = in_turn(plain, heavy)
+    print(
+        f"\nnormal errors {1e3 * normal_s:.0f} ms, heavy tails {1e3 * heavy_s:.0f} ms "
+        f"({heavy.found.sweeps} sweeps): {heavy_s / normal_s:.2f} times"
+    )
+    assert heavy_s <= 3.0 * normal_s
+
+
+@pytest.mark.benchmark
+@pytest.mark.slow
+def test_persistent_motion_costs_four_diffusive_evaluations_at_most():
+    diffusive, persistent = Warm(26_000), Warm(26_000, persistent=True)
+    diffusive_s, persistent_s = in_turn(diffusive, persistent)
+    print(
+        f"\ndiffusive {1e3 * diffusive_s:.0f} ms ({diffusive.found.mode.newton_steps} Newton "
+        f"steps), persistent {1e3 * persistent_s:.0f} ms ({persistent.found.mode.newton_steps}): "
+        f"{persistent_s / diffusive_s:.2f} times"
+    )
+    assert persistent_s <= 4.0 * diffusive_s
 
 
 @pytest.mark.benchmark
@@ -158,7 +203,7 @@ def measure(states: int) -> None:
 
     warm = Warm(states)
     warm.evaluate()
-    assert jnp.isfinite(warm.mode.negative_log_marginal)
+    assert jnp.isfinite(warm.found.negative_log_marginal)
     print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
 
 
