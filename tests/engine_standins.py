@@ -157,4 +157,3 @@ def quick_fit(data: TrackData, model: Model, *, step_hours=1.0, report_hours=(),
     return fit_track(
         data, model, FitSettings(step_hours=step_hours, **settings), np.asarray(report_hours, float)
     )
-

@@ -74,10 +74,7 @@ def preference(theta, x, y, t):
     z = (polynomial(FIRST, x, y) - 0.1) / 0.8
     far = jnp.sqrt((x - COLONY[0]) ** 2 + (y - COLONY[1]) ** 2 + 1.0)
     return (
-        theta[1] * z
-        + theta[2] * z**2
-        + theta[3] * (changing(x, y, t) + 0.2) / 0.5
-        + theta[4] * far
+        theta[1] * z + theta[2] * z**2 + theta[3] * (changing(x, y, t) + 0.2) / 0.5 + theta[4] * far
     )
 
 

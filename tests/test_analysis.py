@@ -151,7 +151,9 @@ def test_missing_cells_are_noted(demo):
 
 
 def test_an_unknown_tag(tmp_path):
-    with pytest.raises(StudyError, match="no usable fix has the tag 'TI-P99'; the fixes hold TI-P01"):
+    with pytest.raises(
+        StudyError, match="no usable fix has the tag 'TI-P99'; the fixes hold TI-P01"
+    ):
         prepared_of(tmp_path, tags=("TI-P01", "TI-P99"))
 
 
@@ -186,7 +188,7 @@ def test_a_fix_outside_the_time_of_a_layer(tmp_path):
     with pytest.raises(
         LayerError,
         match=r"tag TI-P01: the fix at 2031-01-01 00:00:00 UTC lies outside the time of layer "
-        r"'(temperature|water)' \(20\d\d-.* to 20\d\d-.*UTC, .*\.nc\)|layer '(temperature|water)'.*time",
+        r"'(temperature|water)' \(2025-.* to 2025-01-31 00:00 UTC, .*\.nc\)",
     ):
         prepare(read_study(study))
 
@@ -210,9 +212,10 @@ def test_a_fix_outside_the_area_of_a_layer(tmp_path):
     lines[at] = ",".join(cells)
     fixes.write_text("\n".join(lines) + "\n")
     with pytest.raises(
-        LayerError, match=r"tag TI-P01: the fix at 20.* UTC \(lon -33\.5000, lat .*; 1 in all\) lies "
+        LayerError,
+        match=r"tag TI-P01: the fix at 20.* UTC \(lon -33\.5000, lat .*; 1 in all\) lies "
         r"outside the area of layer '\w+' \(.*\)",
-    ):  # fmt: skip
+    ):
         prepare(read_study(study))
 
 
@@ -227,7 +230,8 @@ def test_a_path_that_leaves_a_layer_between_the_fixes(demo):
     hole = next(layer for layer in holes if layer.covers(data.at_km).all())
     layers = {**prepared.layers, "depth": hole}
     with pytest.raises(
-        LayerError, match=rf"tag {tag}: the fitted path at .* UTC .* outside the area of layer 'depth'"
+        LayerError,
+        match=rf"tag {tag}: the fitted path at .* UTC .* outside the area of layer 'depth'",
     ):
         trackfit.fit_tags(dataclasses.replace(prepared, layers=layers))
 
@@ -242,7 +246,9 @@ def test_a_plane_that_stretches_is_warned_of(tmp_path):
 
 
 def test_a_fit_that_cannot_be_does_not_stop_the_others(tmp_path):
-    rows = [f"long,2020-01-01T{h:02d}:00Z,{1 + 0.01 * (h % 5)},{2 + 0.01 * h},30" for h in range(20)]
+    rows = [
+        f"long,2020-01-01T{h:02d}:00Z,{1 + 0.01 * (h % 5)},{2 + 0.01 * h},30" for h in range(20)
+    ]
     study = plain_study(
         tmp_path,
         "\n".join(["tag,time,lon,lat,gps_sd_m", "alone,2020-01-01T00:00Z,1,2,30", *rows]) + "\n",

@@ -72,9 +72,7 @@ def test_log_determinant_and_solution(size):
     assert np.allclose(matrix @ solution, right, rtol=0, atol=1e-9)
     assert np.allclose(cholesky.solve(right[:, 0]), solution[:, 0], rtol=1e-12)
     root = np.linalg.cholesky(matrix)
-    assert np.allclose(
-        root.T @ cholesky.solve_transposed_factor(right), right, rtol=0, atol=1e-9
-    )
+    assert np.allclose(root.T @ cholesky.solve_transposed_factor(right), right, rtol=0, atol=1e-9)
 
 
 def test_the_input_is_left_alone():

@@ -5,7 +5,6 @@ import dataclasses
 import jax.numpy as jnp
 import numpy as np
 import pytest
-import scipy.optimize
 import scipy.stats
 import statsmodels.api
 from engine_standins import (
@@ -123,9 +122,7 @@ def twin_fit():
         up = np.asarray(drift(jnp.asarray(THETA), x, y, jnp.asarray([t])))[0]
         z.append(z[-1] + up * dt + np.exp(THETA[0]) * np.sqrt(dt) * rng.normal(size=2))
     z = np.array(z)
-    noise = np.einsum(
-        "kab,kb->ka", np.linalg.cholesky(twin.covariance), rng.normal(size=(24, 2))
-    )
+    noise = np.einsum("kab,kb->ka", np.linalg.cholesky(twin.covariance), rng.normal(size=(24, 2)))
     twin.at_km = z[twin.state] + np.exp(THETA[-1]) * noise
     model = Model(
         motion=Diffusive(),
@@ -142,11 +139,11 @@ def twin_fit():
         start=twin.start,
     )
     data = TrackData("twin", twin.fix_hours, twin.at_km, twin.covariance)
-    return Twin_of(twin, quick_fit(data, model, step_hours=0.5), model)
+    return FittedTwin(twin, quick_fit(data, model, step_hours=0.5), model)
 
 
 @dataclasses.dataclass
-class Twin_of:
+class FittedTwin:
     twin: Twin
     fit: object
     model: Model
@@ -181,9 +178,7 @@ def test_the_covariance_of_a_full_fit_is_the_inverse_of_a_dense_hessian(twin_fit
         )
     expected = np.linalg.inv(np.stack(columns))
     # differences over 0.02 and 0.05 standard errors: 1e-3 of fourth order
-    assert np.allclose(
-        fit.states.theta_covariance, expected, rtol=0, atol=3e-3 * np.outer(sd, sd)
-    )
+    assert np.allclose(fit.states.theta_covariance, expected, rtol=0, atol=3e-3 * np.outer(sd, sd))
 
 
 def test_the_total_covariance_of_a_full_fit(twin_fit):
@@ -375,9 +370,7 @@ def test_half_the_step_changes_a_plain_walk_by_nothing():
 
 
 def test_half_the_step_matters_where_the_drift_is_steep(twin_fit):
-    data = TrackData(
-        "twin", twin_fit.twin.fix_hours, twin_fit.twin.at_km, twin_fit.twin.covariance
-    )
+    data = TrackData("twin", twin_fit.twin.fix_hours, twin_fit.twin.at_km, twin_fit.twin.covariance)
     fit = quick_fit(data, twin_fit.model, step_hours=0.5, step_check=True)
     half = quick_fit(data, twin_fit.model, step_hours=0.25)
     sd = np.sqrt(np.diag(fit.states.theta_covariance))

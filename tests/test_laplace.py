@@ -1,5 +1,7 @@
 """The Laplace engine against exact Gaussians, a dense twin of its own, and published series."""
 
+import itertools
+
 import jax.numpy as jnp
 import numpy as np
 import pytest
@@ -227,9 +229,7 @@ LINEAR_LAYERS = ((X_LAYER, Y_LAYER), ROTATION)
 
 def linear_theta(sigma, pull_x, pull_y, turn, push=(0.0, 0.0)):
     """u = push - (pull_x x, pull_y y) + turn (-y, x), from h = push z - pull/2 z^2."""
-    return np.array(
-        [np.log(sigma), push[0], -0.5 * pull_x, push[1], -0.5 * pull_y, turn, 0.0]
-    )
+    return np.array([np.log(sigma), push[0], -0.5 * pull_x, push[1], -0.5 * pull_y, turn, 0.0])
 
 
 def euler_normal(hours, A, push, sigma, start_mean, start_variance):
@@ -334,7 +334,7 @@ def test_preference_and_rotating_current_settle_to_their_law(pulls, turn, contin
     for power in range(1, len(steps)):
         found = [
             (2**power * fine - coarse) / (2**power - 1)
-            for coarse, fine in zip(found, found[1:], strict=False)
+            for coarse, fine in itertools.pairwise(found)
         ]
     assert found[0] == pytest.approx(np.array(continuous), abs=3e-6)
 
@@ -392,9 +392,7 @@ def test_how_the_mode_moves_with_the_parameters(twin, twin_mode):
 
 
 def test_the_covariance_of_the_states(twin, twin_mode):
-    inverse = np.linalg.inv(
-        twin.hessian(jnp.asarray(twin_mode.states.ravel()), jnp.asarray(THETA))
-    )
+    inverse = np.linalg.inv(twin.hessian(jnp.asarray(twin_mode.states.ravel()), jnp.asarray(THETA)))
     n = twin.problem.n_states
     expected = inverse.reshape(n, 2, n, 2)[np.arange(n), :, np.arange(n)]
     assert np.allclose(covariance_of(twin.problem, twin_mode), expected, rtol=0, atol=1e-10)
@@ -445,7 +443,7 @@ def quiet_step(full, j):
     Third derivatives jump from cell to cell and the Hessian with them, so that the marginal
     likelihood has tiny steps; its gradient is the one between them.
     """
-    problem, theta, mode = full
+    _, theta, mode = full
     step = 1e-3 * max(1.0, abs(theta[j]))
     while True:
         moved = [find_moved(full, j, multiple * step).states for multiple in (-2, 2)]
@@ -498,9 +496,9 @@ def test_fixes_of_one_moment_are_one_fix_of_their_joint_information():
     mean, cov = euler_normal([0.0, 1.0, 2.0], np.zeros((2, 2)), (0, 0), np.exp(0.3), [0, 0], 100.0)
     rows = (2 * np.array([0, 1, 1, 1, 2])[:, None] + [0, 1]).ravel()
     noise = np.exp(0.4) * scipy.linalg.block_diag(*covariance)
-    expected = scipy.stats.multivariate_normal(
-        mean[rows], cov[np.ix_(rows, rows)] + noise
-    ).logpdf(seen.ravel())
+    expected = scipy.stats.multivariate_normal(mean[rows], cov[np.ix_(rows, rows)] + noise).logpdf(
+        seen.ravel()
+    )
     assert -mode.negative_log_marginal == pytest.approx(expected, abs=1e-9)
 
 
@@ -544,7 +542,9 @@ def test_padding_changes_nothing(states):
     gradients = [
         marginal_gradient(p, m).gradient for p, m in zip((whole, bare), modes, strict=True)
     ]
-    assert modes[0].negative_log_marginal == pytest.approx(modes[1].negative_log_marginal, rel=1e-11)
+    assert modes[0].negative_log_marginal == pytest.approx(
+        modes[1].negative_log_marginal, rel=1e-11
+    )
     assert gradients[0] == pytest.approx(gradients[1], rel=1e-9)
     assert whole.padded >= states
 

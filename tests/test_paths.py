@@ -95,13 +95,13 @@ def test_one_row_for_every_hour_and_every_fix(fit):
 
 def test_hours_to_the_nearest_fix_gaps_and_fixes(fit):
     """All by looking at every fix for every row; moments within half a second are one."""
-    table = filled(fit).table
+    table, fixes = filled(fit).table, FIX_HOURS
     for hour, row in zip(hours_since_1970(table["time"]), table.itertuples(), strict=True):
         away = np.abs(FIX_HOURS - hour)
         at_fix = away.min() < 0.5 / 3600
         assert row.at_fix == at_fix
         assert row.hours_to_fix == pytest.approx(0.0 if at_fix else away.min(), abs=1e-6)
-        before, after = FIX_HOURS[FIX_HOURS <= hour], FIX_HOURS[FIX_HOURS >= hour]
+        before, after = fixes[fixes <= hour], fixes[fixes >= hour]
         wide = not at_fix and after.min() - before.max() > 12.0
         assert row.in_gap == wide
     assert table["at_fix"].sum() == 7

@@ -93,7 +93,7 @@ def test_the_preference_along_the_values_the_path_met(fit):
 
 
 def test_the_values_on_the_path_are_the_layers_own(fit):
-    """At a grid time of the changing layer's last slice, by its nodes around (bilinear: roughly)."""
+    """Between the nodes around, of the slices before and after, give or take an overshoot."""
     _, deep, _ = responses_of(fit, NAMES)
     layer = fit.model.layers[0][1]
     hours = fit.states.problem.hours
@@ -116,9 +116,7 @@ def test_the_band_is_that_of_draws_of_the_parameters(fit):
     for response, columns in zip(responses_of(fit, NAMES), ((1, 2), (3,), (4,)), strict=True):
         centre, scale = {1: (CENTRE, SCALE), 3: (-1.0, 0.5), 4: (0.0, 1.0)}[columns[0]]
         z = (response.at - centre) / scale
-        curves = sum(
-            theta[:, c, None] * z ** (power + 1) for power, c in enumerate(columns)
-        )
+        curves = sum(theta[:, c, None] * z ** (power + 1) for power, c in enumerate(columns))
         low, high = np.quantile(curves, [0.025, 0.975], axis=0)
         width = (response.upper95 - response.lower95).max()
         assert np.abs(response.lower95 - low).max() < 0.05 * width

@@ -88,9 +88,7 @@ def test_each_partial_derivative_is_the_difference_of_a_lower_one(orders):
             move[axis] = multiple * step
             return jets(layer, x + move[0], y + move[1], 4, hours)[0, JET_ROW[lower]]
 
-        difference = (
-            8.0 * (shifted(1) - shifted(-1)) - (shifted(2) - shifted(-2))
-        ) / (12.0 * step)
+        difference = (8.0 * (shifted(1) - shifted(-1)) - (shifted(2) - shifted(-2))) / (12.0 * step)
         assert np.allclose(difference, exact, rtol=0, atol=1e-11)
     if max(orders) < 4:
         assert np.abs(exact).max() > 1e-3

@@ -172,9 +172,7 @@ def test_the_velocity_is_the_slope_of_the_preference_and_the_share_of_the_curren
         np.sqrt((x - 1) ** 2 + (y - 2) ** 2 + 1),
     )
     water = np.asarray(
-        spline_jet(
-            fit_spline(CURRENT), bracket_times(CURRENT, HOURS), *map(jnp.asarray, (x, y)), 0
-        )
+        spline_jet(fit_spline(CURRENT), bracket_times(CURRENT, HOURS), *map(jnp.asarray, (x, y)), 0)
     )[:, 0]
     z = (first[0] - 0.1) / 0.9
     for axis, away in enumerate((x - 1, y - 2)):
