@@ -188,7 +188,7 @@ def test_a_fix_outside_the_time_of_a_layer(tmp_path):
     with pytest.raises(
         LayerError,
         match=r"tag TI-P01: the fix at 2031-01-01 00:00:00 UTC lies outside the time of layer "
-        r"'(temperature|water)' \(20\d\d-.* to 20\d\d-.*UTC, .*\.nc\)|layer '(temperature|water)'.*time",
+        r"'(temperature|water)' \(2025-.* to 2025-01-31 00:00 UTC, .*\.nc\)",
     ):
         prepare(read_study(study))
 
@@ -212,9 +212,10 @@ def test_a_fix_outside_the_area_of_a_layer(tmp_path):
     lines[at] = ",".join(cells)
     fixes.write_text("\n".join(lines) + "\n")
     with pytest.raises(
-        LayerError, match=r"tag TI-P01: the fix at 20.* UTC \(lon -33\.5000, lat .*; 1 in all\) lies "
+        LayerError,
+        match=r"tag TI-P01: the fix at 20.* UTC \(lon -33\.5000, lat .*; 1 in all\) lies "
         r"outside the area of layer '\w+' \(.*\)",
-    ):  # fmt: skip
+    ):
         prepare(read_study(study))
 
 

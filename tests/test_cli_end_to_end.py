@@ -54,7 +54,8 @@ def walk_csv(tags=("a",), fixes=30, lon=10.0, lat=55.0, seed=1) -> str:
     rng = np.random.default_rng(seed)
     rows = ["tag,time,lon,lat,gps_sd_m"]
     for tag in tags:
-        at = np.cumsum(rng.normal(size=(fixes, 2)) * [0.02, 0.01], axis=0) + [lon, lat]
+        at = np.cumsum(rng.normal(size=(fixes, 2)) * [0.02, 0.01], axis=0)
+        at += np.array([lon, lat])
         times = pd.date_range("2021-05-01", periods=fixes, freq="2h")
         rows += [
             f"{tag},{when:%Y-%m-%dT%H:%M:%SZ},{(x + 180) % 360 - 180:.5f},{y:.5f},100"
@@ -85,7 +86,7 @@ def test_all_that_the_study_asks_is_there(run):
     names = {path.relative_to(folder).as_posix() for path in folder.rglob("*") if path.is_file()}
     assert names >= ALL_FILES, ALL_FILES - names
     pictures = [name for name in names if name.endswith(".png")]
-    assert all(any(tag in name for name in pictures) for tag in DEMO_TAGS)
+    assert all(any(tag.lower() in name for name in pictures) for tag in DEMO_TAGS)
     assert not foreign_entries(folder)
     assert not [path for path in study.parent.iterdir() if path.name.startswith(".results")]
 
@@ -165,7 +166,7 @@ def whole(folder: Path, name: str) -> bool:
     positions = trackfit.read_results(folder).positions
     return (
         record["study"]["study"]["name"] == name
-        and listed >= ALL_FILES
+        and listed >= ALL_FILES - {"responses.csv"}  # without a preference there is none
         and positions["tag"].nunique() == 2
     )
 
@@ -310,7 +311,10 @@ def test_priors_none_and_an_error_scale_at_rest_end_with_a_sentence(tmp_path):
     assert done.stderr.strip().splitlines()[-1].startswith("a: ")
 
 
-def test_interrupted_it_says_so_and_leaves_nothing(tmp_path):
+@pytest.mark.slow
+@pytest.mark.parametrize("moment", [1.5, 2.5, 3.5, 4.5, 5.5, 6.5])
+def test_interrupted_it_says_so_and_leaves_nothing(tmp_path, moment):
+    """Ctrl-C while libraries load, layers are read, programs are compiled, a mode is sought."""
     study = copied_demo(tmp_path / "tarrow", motion__step_hours="0.1")
     process = subprocess.Popen(
         [sys.executable, "-m", "trackfit_cli", "run", str(study)],
@@ -318,10 +322,10 @@ def test_interrupted_it_says_so_and_leaves_nothing(tmp_path):
         stderr=subprocess.PIPE,
         text=True,
     )
-    time.sleep(6.0)
+    time.sleep(moment)
     process.send_signal(signal.SIGINT)
-    _, said = process.communicate(timeout=120)
+    _, said = process.communicate(timeout=300)
+    assert "Traceback" not in said
     assert process.returncode == 130
     assert "Interrupted." in said
-    assert "Traceback" not in said
     assert not (study.parent / "results").exists()

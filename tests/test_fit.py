@@ -5,7 +5,6 @@ import dataclasses
 import jax.numpy as jnp
 import numpy as np
 import pytest
-import scipy.optimize
 import scipy.stats
 import statsmodels.api
 from engine_standins import (
@@ -141,11 +140,11 @@ def twin_fit():
         start=twin.start,
     )
     data = TrackData("twin", twin.fix_hours, twin.at_km, twin.covariance)
-    return Twin_of(twin, quick_fit(data, model, step_hours=0.5), model)
+    return FittedTwin(twin, quick_fit(data, model, step_hours=0.5), model)
 
 
 @dataclasses.dataclass
-class Twin_of:
+class FittedTwin:
     twin: Twin
     fit: object
     model: Model

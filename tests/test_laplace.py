@@ -336,7 +336,7 @@ def test_preference_and_rotating_current_settle_to_their_law(pulls, turn, contin
     for power in range(1, len(steps)):
         found = [
             (2**power * fine - coarse) / (2**power - 1)
-            for coarse, fine in zip(found, found[1:], strict=False)
+            for coarse, fine in itertools.pairwise(found)
         ]
     assert found[0] == pytest.approx(np.array(continuous), abs=3e-6)
 
