@@ -215,7 +215,7 @@ def test_a_fix_outside_the_area_of_a_layer(tmp_path):
         LayerError,
         match=r"tag TI-P01: the fix at 20.* UTC \(lon -33\.5000, lat .*; 1 in all\) lies "
         r"outside the area of layer '\w+' \(.*\)",
-    ):
+    ):  # fmt: skip
         prepare(read_study(study))
 
 

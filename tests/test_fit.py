@@ -5,6 +5,7 @@ import dataclasses
 import jax.numpy as jnp
 import numpy as np
 import pytest
+import scipy.optimize
 import scipy.stats
 import statsmodels.api
 from engine_standins import (
@@ -140,11 +141,11 @@ def twin_fit():
         start=twin.start,
     )
     data = TrackData("twin", twin.fix_hours, twin.at_km, twin.covariance)
-    return FittedTwin(twin, quick_fit(data, model, step_hours=0.5), model)
+    return TwinOf(twin, quick_fit(data, model, step_hours=0.5), model)
 
 
 @dataclasses.dataclass
-class FittedTwin:
+class TwinOf:
     twin: Twin
     fit: object
     model: Model

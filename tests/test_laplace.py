@@ -1,6 +1,7 @@
 """The Laplace engine against exact Gaussians, a dense twin of its own, and published series."""
 
 import functools
+import itertools
 
 import jax.numpy as jnp
 import numpy as np

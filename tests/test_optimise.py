@@ -132,7 +132,7 @@ def test_a_gradient_that_lies_is_no_minimum():
 
 
 def test_a_slope_without_end_is_no_minimum_and_no_crash():
-    """A straight slope: updates shrink the modelled curvature until nothing is left of it."""
+    """A straight slope: every update shrinks the modelled curvature until none is left."""
     found = search(lambda x: (float(x[0] + x[1]), np.ones(2)), [0.0, 0.0], max_iterations=2000)
     assert not found.converged
 

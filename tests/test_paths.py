@@ -101,7 +101,7 @@ def test_one_row_for_every_hour_and_every_fix(fit):
 
 def test_hours_to_the_nearest_fix_gaps_and_fixes(fit):
     """All by looking at every fix for every row; moments within half a second are one."""
-    table, fixes = filled(fit).table, FIX_HOURS
+    table = filled(fit).table
     for hour, row in zip(hours_since_1970(table["time"]), table.itertuples(), strict=True):
         away = np.abs(FIX_HOURS - hour)
         at_fix = away.min() < 0.5 / 3600

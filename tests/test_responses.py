@@ -93,7 +93,7 @@ def test_the_preference_along_the_values_the_path_met(fit):
 
 
 def test_the_values_on_the_path_are_the_layers_own(fit):
-    """Between the nodes around, of the slices before and after, give or take an overshoot."""
+    """At a grid time of the changing layer's last slice, by its nodes around (roughly)."""
     _, deep, _ = responses_of(fit, NAMES)
     layer = fit.model.layers[0][1]
     hours = fit.states.problem.hours

@@ -13,7 +13,6 @@ from pathlib import Path
 import jax.numpy as jnp
 import numpy as np
 import pytest
-import scipy.linalg
 from scipy.linalg import lapack
 
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
@@ -33,8 +32,8 @@ from trackfit.motion import Diffusive, Persistent, VelocityField
 
 STEP_HOURS = 0.25
 THETA = np.array([np.log(1.5), 5.0, -3.0, -3.0, 2.0, 0.5, 0.0])
-SHIFT = np.array([0.02, 0.2, 0.1, 0.1, 0.1, 0.02, 0.02])
-"""A step of a search at 26,000 states; as standard errors do, it shrinks with the root of more."""
+NEAR = THETA + np.array([0.02, 0.2, 0.1, 0.1, 0.1, 0.02, 0.02])
+"""A step of a search: every parameter moves."""
 
 
 PERSISTENT = (np.array([np.log(1.5), np.log(2.0), *THETA[1:]]),
@@ -43,7 +42,7 @@ TAIL = (np.log(6.0), np.log(6.3))
 
 
 def track(states: int, persistent: bool = False, heavy: bool = False):
-    """Three preference layers (one humped, one changing), a current of two, a fix every 17 states."""
+    """Three preference layers (one humped, one changing), a current, a fix every 17 states."""
     rng = np.random.default_rng(1)
     last = STEP_HOURS * states
     made = {"nodes": 150, "spacing_km": 6.0, "last_hour": last}
@@ -112,15 +111,14 @@ def test_a_warm_evaluation_costs_forty_factorisations_at_most():
     warm = Warm(26_000)
     assert (warm.problem.n_states, len(warm.problem.observations.state)) == (26_000, 1500)
     warm.evaluate(), warm.evaluate()
-    turns = np.array([(warm.evaluate(), warm.factor(), warm.bare_factor()) for _ in range(15)])
-    evaluation, factorisation, bare = np.median(turns, axis=0)
+    pairs = np.array([(warm.evaluate(), warm.factor()) for _ in range(15)])
+    evaluation, factorisation = np.median(pairs, axis=0)
     ratio = evaluation / factorisation
     print(
         f"\nwarm marginal likelihood with gradient: {1e3 * evaluation:.0f} ms "
         f"({warm.found.mode.newton_steps} Newton steps), one banded factorisation "
         f"{1e3 * factorisation:.2f} ms, ratio {ratio:.0f} (quickest of each: "
-        f"{turns[:, 0].min() / turns[:, 1].min():.0f}; to LAPACK alone, {1e3 * bare:.2f} ms: "
-        f"{evaluation / bare:.0f})"
+        f"{pairs[:, 0].min() / pairs[:, 1].min():.0f})"
     )
     assert ratio <= 40.0
 
@@ -171,8 +169,8 @@ def test_the_time_grows_with_the_number_of_states():
     quick, slow = np.median(pairs, axis=0)
     growth = slow / quick / 100.0
     print(
-        f"\n2,600 states {1e3 * quick:.1f} ms ({small.mode.newton_steps} Newton steps), 260,000 "
-        f"states {1e3 * slow:.0f} ms ({large.mode.newton_steps}): {growth:.2f} times linear"
+        f"\n2,600 states {1e3 * quick:.1f} ms, 260,000 states {1e3 * slow:.0f} ms: "
+        f"{growth:.2f} times linear"
     )
     assert growth <= 1.1
 
@@ -201,6 +199,8 @@ def test_memory_a_state():
 
 def measure(states: int) -> None:
     """Print the peak resident size in kB after two evaluations."""
+    import resource
+
     warm = Warm(states)
     warm.evaluate()
     assert jnp.isfinite(warm.found.negative_log_marginal)
