@@ -6,12 +6,13 @@ import jax.numpy as jnp
 import numpy as np
 import scipy.ndimage
 
-from trackfit.inference.fit import FitSettings, Model, TrackData, fit_track
+from trackfit.inference.fit import fit_track
 from trackfit.inference.grid import build_problem, interpolated_start
 from trackfit.inference.marginal import Approximation, Warm, approximate
 from trackfit.inference.parameters import Parameter, ParameterSet
 from trackfit.inference.problem import TrackProblem
 from trackfit.inference.process import Start
+from trackfit.inference.task import FitSettings, Model, TrackData
 from trackfit.layers import Layer
 from trackfit.layers.splines import TimeBracket, fit_spline
 from trackfit.motion import Diffusive, DistanceTerm, LayerTerm, VelocityField

@@ -23,9 +23,10 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from trackfit.inference.banded import dense
-from trackfit.inference.fit import FitStatus, Model, TrackData
+from trackfit.inference.fit import FitStatus
 from trackfit.inference.marginal import approximate
 from trackfit.inference.parameters import ParameterSet
+from trackfit.inference.task import Model, TrackData
 from trackfit.model import typical_diffusion
 from trackfit.motion import Diffusive, Persistent, VelocityField
 
@@ -483,7 +484,8 @@ def test_half_the_step_matters_where_the_drift_is_steep(twin_fit):
 
 def test_progress_rises_to_one():
     told = []
-    from trackfit.inference.fit import FitSettings, fit_track
+    from trackfit.inference.fit import fit_track
+    from trackfit.inference.task import FitSettings
 
     data, _ = walk(5, 80)
     fit_track(

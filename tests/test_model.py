@@ -10,7 +10,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from trackfit.faults import LayerError
-from trackfit.inference.fit import TrackData
+from trackfit.inference.task import TrackData
 from trackfit.model import DRIFT_PRIOR, SCALE_PRIOR_LOG_SD, build_model, typical_diffusion
 from trackfit.motion import DistanceTerm
 from trackfit.study import read_study

@@ -20,10 +20,12 @@ from hypothesis import strategies as st
 from pyproj import Geod
 
 from trackfit.frame import Plane
-from trackfit.inference.fit import FitStatus, States, TrackData
+from trackfit.inference.fit import FitStatus
 from trackfit.inference.grid import time_grid
 from trackfit.inference.integrate import PathMixture, WeightedPoints
 from trackfit.inference.laplace import mode_sensitivity
+from trackfit.inference.states import States
+from trackfit.inference.task import TrackData
 from trackfit.motion import Diffusive
 from trackfit.paths import (
     FilledTrack,

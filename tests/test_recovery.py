@@ -18,9 +18,10 @@ from scipy.linalg import expm, solve_continuous_lyapunov
 from scipy.stats import chi2
 from simulator import AMPLITUDES, Paths, Persistence, Sea, Tag, path_estimates, simulate
 
-from trackfit.inference.fit import Fit, FitSettings, FitStatus, Model, TrackData, fit_track
+from trackfit.inference.fit import Fit, FitStatus, fit_track
 from trackfit.inference.grid import nearest_state
 from trackfit.inference.parameters import Parameter, ParameterSet
+from trackfit.inference.task import FitSettings, Model, TrackData
 from trackfit.layers import Layer
 from trackfit.layers.splines import fit_spline
 from trackfit.motion import Diffusive, DistanceTerm, LayerTerm, VelocityField

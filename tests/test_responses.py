@@ -15,8 +15,8 @@ from engine_standins import (
     walk,
 )
 
-from trackfit.inference.fit import Model, TrackData
 from trackfit.inference.parameters import ParameterSet
+from trackfit.inference.task import Model, TrackData
 from trackfit.layers.splines import fit_spline
 from trackfit.motion import Diffusive, VelocityField
 from trackfit.motion.terms import TermName

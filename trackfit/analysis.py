@@ -14,8 +14,9 @@ from trackfit.errors import CLASS_SD_M, ErrorRules, fix_covariances, without_err
 from trackfit.faults import FixesError, LayerError, StudyError
 from trackfit.fixes import Fixes, read_fixes
 from trackfit.frame import Plane
-from trackfit.inference.fit import Fit, FitSettings, TrackData, fit_track
+from trackfit.inference.fit import Fit, fit_track
 from trackfit.inference.grid import time_grid
+from trackfit.inference.task import FitSettings, TrackData
 from trackfit.layers import Box, Coast, Layer, LayerRequest, read_coast, read_layer
 from trackfit.model import StudyModel, build_model
 from trackfit.paths import FilledTrack, fill_track, hours_since_1970, report_hours, times_utc

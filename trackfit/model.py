@@ -11,9 +11,9 @@ from jaxtyping import Float
 
 from trackfit.faults import LayerError
 from trackfit.frame import Plane
-from trackfit.inference.fit import Model, TrackData
 from trackfit.inference.grid import PacePrior
 from trackfit.inference.parameters import Parameter, ParameterSet
+from trackfit.inference.task import Model, TrackData
 from trackfit.layers.layer import Layer
 from trackfit.layers.splines import Spline, fit_spline
 from trackfit.motion import Diffusive, DistanceTerm, LayerTerm, Motion, Persistent, VelocityField

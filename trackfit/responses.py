@@ -7,7 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 from jaxtyping import Float
 
-from trackfit.inference.fit import NORMAL_95, Fit
+from trackfit.inference.estimates import NORMAL_95
+from trackfit.inference.fit import Fit
 from trackfit.layers.splines import spline_jet
 from trackfit.motion import LayerTerm
 from trackfit.motion.terms import TermName

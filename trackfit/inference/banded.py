@@ -44,15 +44,6 @@ class Cholesky(NamedTuple):
         _check(info)
         return solution.reshape(right.shape)
 
-    def multiply_factor(
-        self, right: Float[np.ndarray, "size columns"]
-    ) -> Float[np.ndarray, "size columns"]:
-        """L times right: turns white noise into draws with covariance L L'."""
-        product = np.zeros_like(right)
-        for below, diagonal in enumerate(self.storage):
-            product[below:] += diagonal[: len(right) - below, None] * right[: len(right) - below]
-        return product
-
 
 def factor(band: Float[np.ndarray, "n dim 2*dim"]) -> Cholesky:
     """Cholesky factor of a block tridiagonal matrix.

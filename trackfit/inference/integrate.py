@@ -22,7 +22,7 @@ from trackfit.inference.optimise import Rejected
 REACH = np.sqrt(2.0)
 """Distance from the mode, in standard deviations, at which the density's fall is measured."""
 
-WIDENED = 1.1
+WIDENED = 1.3
 """The design is this much wider than the split normal, so that no tail weighs too much."""
 
 

@@ -4,8 +4,7 @@ Taking a fix's own site out of the marginal of its state leaves the cavity N(m, 
 of the position from the other fixes, parameters held. Nothing is fitted again.
 
 Residuals of neighbouring fixes are not independent, not even where the model is true: two fixes
-close in time pull each other's predictions. What to expect of them is drawn by
-`trackfit.inference.replicates`.
+close in time pull each other's predictions.
 """
 
 from __future__ import annotations

@@ -76,7 +76,11 @@ def minimise(
         raise Rejected
     decrement = np.inf
     for iteration in range(max_iterations):
-        step = -np.linalg.solve(metric, gradient)
+        try:
+            step = -np.linalg.solve(metric, gradient)
+        except np.linalg.LinAlgError:
+            # a slope without end has worn the modelled curvature down to nothing
+            return Minimum(at, value, gradient, metric, decrement, iteration, False)
         decrement = -0.5 * float(gradient @ step)
         progress(iteration, decrement)
         if decrement < tolerance:

@@ -12,11 +12,11 @@ from typing import Self
 
 import numpy as np
 from jaxtyping import Float
-from scipy.special import gammaln, logsumexp
+from scipy.special import logsumexp
 
 from trackfit.inference.observations import LOG_2PI
 from trackfit.inference.sites import determinant, inverse_2x2
-from trackfit.inference.tails import LOG_WEIGHT_STEP, LOG_WEIGHTS
+from trackfit.inference.tails import weight_nodes
 
 
 @dataclass(frozen=True)
@@ -93,14 +93,8 @@ def error_mixture(
     """
     if log_nu is None:
         return np.ones(1), np.zeros(1)
-    half = 0.5 * np.exp(log_nu)
-    log_mass = (
-        np.log(LOG_WEIGHT_STEP)
-        + half * np.log(half)
-        - gammaln(half)
-        + half * (LOG_WEIGHTS - np.exp(LOG_WEIGHTS))
-    )
-    return np.exp(LOG_WEIGHTS), log_mass
+    nodes, log_mass = weight_nodes(log_nu)
+    return np.exp(nodes), log_mass
 
 
 def _residuals(

@@ -82,7 +82,7 @@ class DistanceTerm:
         dx, dy = x_km - self.point_km[0], y_km - self.point_km[1]
         zero, two = jnp.zeros_like(dx), jnp.full_like(dx, 2.0)
         rows = [dx**2 + dy**2 + SOFTENING_KM**2, 2 * dx, 2 * dy, two, zero, two] + [zero] * 9
-        return square_root_jet(jnp.stack(rows))[None]
+        return square_root_jet(jnp.stack(rows[: jet_rows(order)]))[None]
 
 
 Term = LayerTerm | DistanceTerm
