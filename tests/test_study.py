@@ -15,8 +15,9 @@ from pydantic import ValidationError
 from trackfit.faults import StudyError
 from trackfit.study import RESERVED_NAMES, Study, read_study
 from trackfit.study_faults import RULES, key_text, model_at, tables
+from trackfit.study_fixes import Columns
 from trackfit.study_lines import key_lines, line_of
-from trackfit.study_schema import Columns, Table
+from trackfit.study_table import Table
 from trackfit.study_values import nearest
 
 ROOT = Path(__file__).parent.parent

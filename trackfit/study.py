@@ -15,6 +15,7 @@ from pydantic import Field, PrivateAttr, ValidationError, model_validator
 
 from trackfit.faults import StudyError
 from trackfit.study_faults import Fault, faults_of, value_text
+from trackfit.study_fixes import FixesFiles
 from trackfit.study_lines import KeyPath, key_lines
 from trackfit.study_schema import (
     About,
@@ -22,15 +23,14 @@ from trackfit.study_schema import (
     Current,
     Errors,
     Fit,
-    FixesFiles,
     LayerSettings,
     Motion,
     Output,
     Paths,
     PlaneSettings,
     Preference,
-    Table,
 )
+from trackfit.study_table import Table
 from trackfit.study_values import nearest, setting
 
 RESERVED_NAMES = ("current", "diffusion", "drift", "error_scale")

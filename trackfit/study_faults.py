@@ -10,7 +10,7 @@ from pydantic import BaseModel, ValidationError
 from pydantic_core import ErrorDetails
 
 from trackfit.study_lines import KeyPath, line_of
-from trackfit.study_schema import Table
+from trackfit.study_table import Table
 from trackfit.study_values import nearest
 
 RULES: Mapping[str, str] = {

@@ -23,16 +23,16 @@ import numpy as np
 from jaxtyping import Float
 
 from trackfit.inference.banded import Cholesky, NotPositiveDefinite, factor, reversed_band
-from trackfit.inference.observations import Sites
-from trackfit.inference.problem import Point, TrackProblem, evaluate_at
-from trackfit.inference.process import (
-    ProcessParameters,
+from trackfit.inference.derivatives import (
     StepSpread,
     gradient_sensitivity,
     parameter_gradient,
     step_spread,
     trace_gradient,
 )
+from trackfit.inference.observations import Sites
+from trackfit.inference.problem import Point, TrackProblem, evaluate_at
+from trackfit.inference.process import ProcessParameters
 
 MAX_NEWTON = 60
 DECREMENT_TOLERANCE = 1e-9

@@ -29,7 +29,6 @@ import jax
 import jax.numpy as jnp
 from jaxtyping import Array, Float, Int
 
-from trackfit.layers.splines import jet_rows
 from trackfit.motion import FieldTimes, Motion, VelocityField
 from trackfit.motion.blocks import (
     Element,
@@ -38,17 +37,13 @@ from trackfit.motion.blocks import (
     apply,
     both_axes,
     dot,
-    inverse,
-    minus,
     packed,
     product,
-    symmetric,
     times,
     total,
     transposed,
-    unpacked,
 )
-from trackfit.motion.velocity import Basis, amplitude_gradient, shift_gradient, velocity_jet
+from trackfit.motion.velocity import Basis, velocity_jet
 
 LOG_2PI = 1.8378770664093453
 
@@ -106,7 +101,9 @@ class Evaluation(NamedTuple):
     curvature: Float[Array, "states 3"]
 
 
-class _StepTerms(NamedTuple):
+class StepTerms(NamedTuple):
+    """What one evaluation of all steps gives: r, W r, J, W, log det Q and B."""
+
     residual: Vector
     weighted: Vector
     jacobian: Matrix
@@ -115,20 +112,9 @@ class _StepTerms(NamedTuple):
     curvature: tuple[Element, Element, Element]
 
 
-class StepSpread(NamedTuple):
-    """Covariances of the Gaussian approximation, states or steps last.
+class StartTerms(NamedTuple):
+    """The same of the start, whose precision is diagonal."""
 
-    `residual` is the covariance of the linearised residual r = z' - J z of each step, `cross` that
-    of r with z. They are kept instead of the covariance of neighbours: where a step is short, z and
-    z' are all but equal and their covariances cannot tell r from rounding.
-    """
-
-    covariance: Float[Array, "dim dim states"]
-    residual: Float[Array, "dim dim steps"]
-    cross: Float[Array, "dim dim steps"]
-
-
-class _StartTerms(NamedTuple):
     residual: Vector
     weighted: Vector
     jacobian: Matrix
@@ -153,187 +139,27 @@ def evaluate(
     states cancel in the Laplace approximation.
     """
     steps = z.shape[1] - 1
-    field = _field(theta, basis, z, 2)
-    terms = _step_terms(motion, theta, *_ends(z), _rows(field), track.steps)
-    start = _start_terms(motion, theta, list(z[:, 0]), _first(field), track)
-    gradient = _process_gradient(terms, start)
+    field = field_at(theta, basis, z, 2)
+    terms = step_terms(motion, theta, *ends_of_steps(z), rows_of_steps(field), track.steps)
+    start = start_terms(motion, theta, list(z[:, 0]), rows_of_start(field), track)
+    gradient = process_gradient(terms, start)
 
     weight_jacobian = product(both_axes(terms.weight), terms.jacobian)
-    diagonal = _pad_end(packed(product(transposed(terms.jacobian), weight_jacobian), steps))
-    diagonal = diagonal + _pad_start(packed(both_axes(terms.weight), steps))
+    diagonal = pad_end(packed(product(transposed(terms.jacobian), weight_jacobian), steps))
+    diagonal = diagonal + pad_start(packed(both_axes(terms.weight), steps))
     diagonal = diagonal.at[..., 0].add(_start_information(start))
-    curvature = _pad_end(jnp.stack(terms.curvature))
+    curvature = pad_end(jnp.stack(terms.curvature))
     curvature = curvature.at[:, 0].add(jnp.stack(_filled(start.curvature)))
     diagonal = diagonal.at[:2, :2].add(
         -jnp.stack([jnp.stack([curvature[0], curvature[1]]), curvature[1:]])
     )
-    off = _pad_end(-packed(transposed(weight_jacobian), steps))
+    off = pad_end(-packed(transposed(weight_jacobian), steps))
     return Evaluation(
-        value=_density(terms) + _start_density(start),
+        value=density(terms) + start_density(start),
         gradient=gradient.T,
         band=_band(diagonal, off),
         curvature=curvature.T,
     )
-
-
-@partial(jax.jit, static_argnames="motion")
-def step_spread(
-    motion: Motion,
-    theta: ProcessParameters,
-    z: Float[Array, "dim states"],
-    basis: Basis,
-    track: Track,
-    forward: Float[Array, "states dim 2*dim"],
-    backward: Float[Array, "states dim 2*dim"],
-) -> StepSpread:
-    """Blocks of the inverse Hessian, without a recursion over states.
-
-    `forward` and `backward` are the banded factors of the Hessian and of the reversed Hessian, the
-    latter's states turned back. Their diagonal blocks give the Schur complements Sf_i and Sb_i (see
-    `trackfit.inference.banded.block_covariances`). With the step's own r'Wr taken out, A = Sf_i -
-    J'WJ and D = Sb_(i+1) - W hold what is known of z and z' from both sides, and in the
-    variables (z, r) the joint precision is [[A + J'DJ, J'D], [DJ, D + W]]. With T = inv(D + W):
-
-        V = inv(A + J'(W T D)J),   cov(r, z) = -T D J V,   cov(r) = T + T D J V J'D T.
-
-    The last state's V is inv(Sf).
-    """
-    before = _schur_complements(forward, reverse=False)
-    after = _schur_complements(backward, reverse=True)
-    field = _field(theta, basis, z, 2)
-    terms = _step_terms(motion, theta, *_ends(z), _rows(field), track.steps)
-    J, W = terms.jacobian, both_axes(terms.weight)
-    own = product(transposed(J), product(W, J))
-    known_before = _difference([[_part(e, slice(None, -1)) for e in row] for row in before], own)
-    known_after = _difference([[_part(e, slice(1, None)) for e in row] for row in after], W)
-    T = inverse(_sum(known_after, W))
-    pull = product(T, known_after)
-    through = product(product(transposed(J), product(W, pull)), J)
-    V = inverse(symmetric(_sum(known_before, through)))
-    cross = product(product(pull, J), V)
-    residual = _sum(T, product(cross, transposed(product(pull, J))))
-    last = inverse([[_part(e, slice(-1, None)) for e in row] for row in before])
-    steps = z.shape[1] - 1
-    covariance = jnp.concatenate([packed(V, steps), packed(last, 1)], axis=-1)
-    return StepSpread(covariance, packed(symmetric(residual), steps), -packed(cross, steps))
-
-
-def _schur_complements(columns: Array, *, reverse: bool) -> Matrix:
-    """L_ii L_ii' of every block of a banded factor."""
-    dim = columns.shape[1]
-    root: Matrix = [[columns[:, c, r - c] if r >= c else 0 for c in range(dim)] for r in range(dim)]
-    square = product(root, transposed(root))
-    return [row[::-1] for row in square[::-1]] if reverse else square
-
-
-def _part(element: Element, which: slice) -> Element:
-    return 0 if isinstance(element, int) else element[which]
-
-
-def _sum(a: Matrix, b: Matrix) -> Matrix:
-    return [[total((x, y)) for x, y in zip(p, q, strict=True)] for p, q in zip(a, b, strict=True)]
-
-
-def _difference(a: Matrix, b: Matrix) -> Matrix:
-    return [[minus(x, y) for x, y in zip(p, q, strict=True)] for p, q in zip(a, b, strict=True)]
-
-
-@partial(jax.jit, static_argnames="motion")
-def trace_gradient(
-    motion: Motion,
-    theta: ProcessParameters,
-    z: Float[Array, "dim states"],
-    basis: Basis,
-    track: Track,
-    spread: StepSpread,
-) -> Float[Array, "states dim"]:
-    """Gradient in the states of 1/2 <V, H>, with V = inv(H) held.
-
-    The basis must hold the derivatives of the velocity up to order three.
-    """
-    field = _field(theta, basis, z, 3)
-
-    def half_trace(before: Vector, after: Vector, rows: FieldRows) -> Array:
-        terms = _step_terms(motion, theta, before, after, rows, track.steps)
-        return _half_trace(terms, spread)
-
-    def half_trace_start(first: Vector, rows: FieldRows) -> Array:
-        start = _start_terms(motion, theta, first, rows, track)
-        return _half_trace_start(start, spread.covariance[..., 0])
-
-    low = field[:, : jet_rows(2)]
-    of_before, of_after, of_rows = jax.grad(half_trace, argnums=(0, 1, 2))(*_ends(z), _rows(low))
-    of_field = jnp.stack([jnp.stack(component) for component in of_rows])
-    of_position = shift_gradient(of_field, field[..., :-1])
-    of_before = jnp.stack(of_before).at[:2].add(of_position)
-    gradient = _pad_end(of_before) + _pad_start(jnp.stack(of_after))
-
-    of_first, of_rows = jax.grad(half_trace_start, argnums=(0, 1))(list(z[:, 0]), _first(low))
-    of_field = jnp.stack([jnp.stack(component) for component in of_rows])
-    of_shift = shift_gradient(of_field[..., None], field[..., :1])[:, 0]
-    return gradient.at[:, 0].add(jnp.stack(of_first).at[:2].add(of_shift)).T
-
-
-@partial(jax.jit, static_argnames="motion")
-def parameter_gradient(
-    motion: Motion,
-    theta: ProcessParameters,
-    z: Float[Array, "dim states"],
-    basis: Basis,
-    track: Track,
-    spread: StepSpread,
-    adjoint: Float[Array, "dim states"],
-) -> ProcessParameters:
-    """Gradient in theta of f + 1/2 <V, H> + adjoint' g, with states, V and adjoint held.
-
-    With H adjoint = -gradient(1/2 <V, H>) this is the exact gradient of the Laplace marginal
-    likelihood in theta (process part).
-    """
-    adjoint_before, adjoint_after = _ends(adjoint)
-
-    def lagrangian(theta: ProcessParameters, rows: FieldRows, first_rows: FieldRows) -> Array:
-        terms = _step_terms(motion, theta, *_ends(z), rows, track.steps)
-        moved = apply(terms.jacobian, adjoint_before)
-        along = [minus(a, b) for a, b in zip(adjoint_after, moved, strict=True)]
-        start = _start_terms(motion, theta, list(z[:, 0]), first_rows, track)
-        along_start = apply(start.jacobian, list(adjoint[:, 0]))
-        return (
-            _density(terms)
-            + _half_trace(terms, spread)
-            + jnp.sum(dot(along, terms.weighted))
-            + _start_density(start)
-            + _half_trace_start(start, spread.covariance[..., 0])
-            + dot(along_start, start.weighted)
-        )
-
-    field = _field(theta, basis, z, 2)
-    of_theta, of_rows, of_first = jax.grad(lagrangian, argnums=(0, 1, 2))(
-        theta, _rows(field), _first(field)
-    )
-    of_field = _pad_end(jnp.stack([jnp.stack(component) for component in of_rows]))
-    of_first = jnp.stack([jnp.stack(component) for component in of_first])
-    of_field = of_field.at[..., 0].add(of_first)
-    return of_theta._replace(amplitudes=amplitude_gradient(of_field, basis))
-
-
-@partial(jax.jit, static_argnames="motion")
-def gradient_sensitivity(
-    motion: Motion,
-    theta: ProcessParameters,
-    z: Float[Array, "dim states"],
-    basis: Basis,
-    track: Track,
-) -> Float[Array, "states dim parameters"]:
-    """Derivative in theta of the gradient in the states (process part), states held."""
-
-    def gradient(theta: ProcessParameters) -> Array:
-        field = _field(theta, basis, z, 2)
-        terms = _step_terms(motion, theta, *_ends(z), _rows(field), track.steps)
-        start = _start_terms(motion, theta, list(z[:, 0]), _first(field), track)
-        return _process_gradient(terms, start)
-
-    parts = [part for part in jax.jacfwd(gradient)(theta) if part is not None]
-    return jnp.moveaxis(jnp.concatenate(parts, axis=-1), 0, 1)
 
 
 class LinearSteps(NamedTuple):
@@ -360,9 +186,9 @@ def linear_steps(
 ) -> LinearSteps:
     """Linearise every step and the start at the states."""
     steps = z.shape[1] - 1
-    field = _field(theta, basis, z, 2)
-    terms = _step_terms(motion, theta, *_ends(z), _rows(field), track.steps)
-    start = _start_terms(motion, theta, list(z[:, 0]), _first(field), track)
+    field = field_at(theta, basis, z, 2)
+    terms = step_terms(motion, theta, *ends_of_steps(z), rows_of_steps(field), track.steps)
+    start = start_terms(motion, theta, list(z[:, 0]), rows_of_start(field), track)
     gradient = apply(transposed(start.jacobian), start.weighted)
     return LinearSteps(
         residual=jnp.stack(terms.residual),
@@ -373,35 +199,36 @@ def linear_steps(
     )
 
 
-def _field(theta: ProcessParameters, basis: Basis, z: Array, order: int) -> Array:
+def field_at(theta: ProcessParameters, basis: Basis, z: Array, order: int) -> Array:
     """The velocity field's rows at the states; kept whole so that they are computed once."""
     rows = velocity_jet(theta.amplitudes, basis, z.shape[1], order)
     return jax.lax.optimization_barrier(rows)
 
 
-def _rows(field: Array) -> FieldRows:
+def rows_of_steps(field: Array) -> FieldRows:
     """The field at the start of every step, as separate vectors."""
     return tuple(field[0, :, :-1]), tuple(field[1, :, :-1])
 
 
-def _first(field: Array) -> FieldRows:
+def rows_of_start(field: Array) -> FieldRows:
     """The field at the first state, as separate numbers."""
     return tuple(field[0, :, 0]), tuple(field[1, :, 0])
 
 
-def _ends(z: Array) -> tuple[Vector, Vector]:
+def ends_of_steps(z: Array) -> tuple[Vector, Vector]:
     """States at the start and at the end of every step, as separate vectors."""
     return list(z[:, :-1]), list(z[:, 1:])
 
 
-def _step_terms(
+def step_terms(
     motion: Motion,
     theta: ProcessParameters,
     before: Vector,
     after: Vector,
     field: FieldRows,
     steps: Steps,
-) -> _StepTerms:
+) -> StepTerms:
+    """Evaluate all steps at their ends, given the field at their starts."""
     k = motion.k
     F, G, W, log_det = motion.transition(theta.log_motion, steps.dt_hours)
     pace = jnp.zeros(()) if theta.log_pace is None else theta.log_pace[steps.spell]
@@ -421,12 +248,12 @@ def _step_terms(
     weighted = apply(both_axes(weight), residual)
     push = [dot(G, [weighted[2 * p + axis] for p in range(k)]) for axis in range(2)]
     xx, xy, yy = (push[0] * field[0][row] + push[1] * field[1][row] for row in range(3, 6))
-    return _StepTerms(residual, weighted, jacobian, weight, log_det * steps.mask, (xx, xy, yy))
+    return StepTerms(residual, weighted, jacobian, weight, log_det * steps.mask, (xx, xy, yy))
 
 
-def _start_terms(
+def start_terms(
     motion: Motion, theta: ProcessParameters, first: Vector, field: FieldRows, track: Track
-) -> _StartTerms:
+) -> StartTerms:
     """The prior of the first state: position around its mean, velocity around the field."""
     start = track.start
     position, *velocity = motion.start_precision(theta.log_motion, start.sd_km)
@@ -449,10 +276,10 @@ def _start_terms(
             weighted[2] * field[0][row] + weighted[3] * field[1][row] for row in range(3, 6)
         )
         curvature = (xx, xy, yy)
-    return _StartTerms(residual, weighted, jacobian, precision, curvature)
+    return StartTerms(residual, weighted, jacobian, precision, curvature)
 
 
-def _start_information(start: _StartTerms) -> Array:
+def _start_information(start: StartTerms) -> Array:
     """J' P J of the first state."""
     weighted = [
         [times(p, e) for e in row] for p, row in zip(start.precision, start.jacobian, strict=True)
@@ -466,61 +293,31 @@ def _filled(elements: Sequence[Element]) -> list[Array]:
     return [jnp.asarray(element, float) for element in elements]
 
 
-def _start_density(start: _StartTerms) -> Array:
+def start_density(start: StartTerms) -> Array:
+    """Start part of f, without factors of 2 pi."""
     log_det = jnp.sum(jnp.log(jnp.stack(start.precision)))
     return jnp.asarray(0.5 * dot(start.residual, start.weighted) - 0.5 * log_det)
 
 
-def _half_trace_start(start: _StartTerms, covariance: Array) -> Array:
-    """1/2 <V, H> of the start."""
-    V = unpacked(covariance)
-    spread = product(product(start.jacobian, V), transposed(start.jacobian))
-    inner = total(times(p, spread[i][i]) for i, p in enumerate(start.precision))
-    xx, xy, yy = start.curvature
-    bend = total((times(xx, V[0][0]), times(xy, V[0][1] + V[1][0]), times(yy, V[1][1])))
-    return jnp.asarray(0.5 * minus(inner, bend))
-
-
-def _process_gradient(terms: _StepTerms, start: _StartTerms) -> Array:
+def process_gradient(terms: StepTerms, start: StartTerms) -> Array:
+    """Gradient of f in the states."""
     back = apply(transposed(terms.jacobian), terms.weighted)
-    gradient = _pad_start(jnp.stack(terms.weighted)) - _pad_end(jnp.stack(back))
+    gradient = pad_start(jnp.stack(terms.weighted)) - pad_end(jnp.stack(back))
     first = apply(transposed(start.jacobian), start.weighted)
     return gradient.at[:, 0].add(jnp.stack(_filled(first)))
 
 
-def _density(terms: _StepTerms) -> Array:
+def density(terms: StepTerms) -> Array:
     """Process part of f, without the start and without factors of 2 pi."""
     return jnp.sum(0.5 * dot(terms.residual, terms.weighted) + terms.log_det)
 
 
-def _half_trace(terms: _StepTerms, spread: StepSpread) -> Array:
-    """1/2 <V, H> of the process: W against the covariance of the linearised residual, less B.
-
-    The covariance is that of r - (J - J_0) z, to first order around the J_0 at hand.
-    """
-    V = unpacked(spread.covariance[..., :-1])
-    residual, cross = unpacked(spread.residual), unpacked(spread.cross)
-    change = [[minus(e, jax.lax.stop_gradient(e)) for e in row] for row in terms.jacobian]
-    moved = product(change, transposed(cross))
-    k = len(terms.weight)
-    parts = []
-    for p in range(k):
-        for q in range(k):
-            for axis in range(2):
-                r, c = 2 * p + axis, 2 * q + axis
-                inner = minus(residual[r][c], total((moved[r][c], moved[c][r])))
-                parts.append(times(terms.weight[p][q], inner))
-    xx, xy, yy = terms.curvature
-    bend = xx * V[0][0] + xy * (V[0][1] + V[1][0]) + yy * V[1][1]
-    return 0.5 * jnp.sum(minus(total(parts), bend))
-
-
-def _pad_end(steps: Array) -> Array:
+def pad_end(steps: Array) -> Array:
     """From one column a step to one a state: the state where the step starts."""
     return jnp.concatenate([steps, jnp.zeros((*steps.shape[:-1], 1))], axis=-1)
 
 
-def _pad_start(steps: Array) -> Array:
+def pad_start(steps: Array) -> Array:
     """From one column a step to one a state: the state where the step ends."""
     return jnp.concatenate([jnp.zeros((*steps.shape[:-1], 1)), steps], axis=-1)
 
