@@ -25,7 +25,15 @@ ORDER = (
     ("layers",),
     ("motion",),
     ("inference",),
-    ("study", "study_faults", "study_lines", "study_schema", "study_values"),
+    (
+        "study",
+        "study_faults",
+        "study_fixes",
+        "study_lines",
+        "study_schema",
+        "study_table",
+        "study_values",
+    ),
     ("model", "paths", "responses"),
     ("analysis",),
     ("results", "report"),
@@ -39,7 +47,16 @@ The study stands above the engine only because its units and its planes are thos
 
 LEVEL = {name: level for level, storey in enumerate(ORDER) for name in storey}
 HEAVY = {"jax", "geopandas", "xarray", "matplotlib", "rasterio", "scipy", "pandas", "numpy"}
-LIGHT = ["faults", "study", "study_faults", "study_lines", "study_schema", "study_values"]
+LIGHT = [
+    "faults",
+    "study",
+    "study_faults",
+    "study_fixes",
+    "study_lines",
+    "study_schema",
+    "study_table",
+    "study_values",
+]
 
 
 def is_type_checking(node) -> bool:

@@ -145,7 +145,12 @@ def test_the_study_as_understood_is_json_and_names_paths_as_written(folder: Path
     assert understood["fixes"]["files"] == ["fixes.csv"]
     assert understood["layers"]["depth"]["file"] == "layers/depth.nc"
     assert understood["output"]["folder"] == "results"
-    assert understood["motion"] == {"kind": "diffusive", "step_hours": 0.5}
+    assert understood["motion"] == {
+        "kind": "diffusive",
+        "step_hours": 0.5,
+        "pace_log_sd": 0.0,
+        "pace_hours": 24.0,
+    }
     assert set(understood) == set(Study.model_fields)
 
 
@@ -630,14 +635,32 @@ def test_a_place_of_the_schema_is_found_by_its_path() -> None:
 
 
 def test_reading_a_plain_study_loads_nothing_heavy() -> None:
-    for name in ("study", "study_faults", "study_lines", "study_schema", "study_values"):
+    for name in (
+        "study",
+        "study_faults",
+        "study_fixes",
+        "study_lines",
+        "study_schema",
+        "study_table",
+        "study_values",
+    ):
         tree = ast.parse((ROOT / "trackfit" / f"{name}.py").read_text(encoding="utf-8"))
         at_top = {
             (node.module or "") if isinstance(node, ast.ImportFrom) else node.names[0].name
             for node in tree.body
             if isinstance(node, ast.Import | ast.ImportFrom)
         }
-        own = {f"trackfit.{x}" for x in ("faults", "study_faults", "study_lines", "study_schema")}
+        own = {
+            f"trackfit.{x}"
+            for x in (
+                "faults",
+                "study_faults",
+                "study_fixes",
+                "study_lines",
+                "study_schema",
+                "study_table",
+            )
+        }
         heavy = {
             x
             for x in at_top - own - {"trackfit.study_values", "pydantic", "pydantic_core"}
