@@ -35,8 +35,11 @@ from trackfit.inference.problem import Point, TrackProblem, evaluate_at
 from trackfit.inference.process import ProcessParameters
 
 MAX_NEWTON = 60
-DECREMENT_TOLERANCE = 1e-9
-"""Newton stops where the decrement g' inv(H) g (twice the gain still to be had) is below."""
+DECREMENT_TOLERANCE = 1e-8
+"""Newton stops where the decrement g' inv(H) g (twice the gain still to be had) is below.
+
+The states are then a ten-thousandth of their joint standard deviation from the mode.
+"""
 
 MAX_HALVINGS = 25
 

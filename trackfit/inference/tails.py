@@ -24,7 +24,12 @@ from scipy.special import digamma, gammaln
 import trackfit.compiled  # noqa: F401  (float64 before any array is made)
 from trackfit.inference.observations import LOG_2PI
 
-GRIDS = ((8.0, 0.4, -30.0, 5.4), (32.0, 0.22, -24.0, 4.1), (200.0, 0.09, -20.0, 2.4))
+GRIDS = (
+    (8.0, 0.4, -30.0, 5.4),
+    (32.0, 0.22, -24.0, 4.1),
+    (200.0, 0.09, -20.0, 2.4),
+    (5000.0, 0.0175, -8.0, 0.6),
+)
 """Nodes in log w: up to this nu, their step, the first and the last.
 
 The rule's relative error is 2 |Gamma(nu/2 + 2 pi i/h)| / Gamma(nu/2), below 1e-9 with these steps;
@@ -38,7 +43,7 @@ def weight_nodes(
 ) -> tuple[Float[np.ndarray, " nodes"], Float[np.ndarray, " nodes"]]:
     """Nodes in log w and the logarithms of their masses under Gamma(nu/2, rate nu/2).
 
-    Above nu = 200 a t is taken as normal: one node, w = 1.
+    Above nu = 5000 a t is taken as normal: one node, w = 1.
     """
     nu = float(np.exp(log_nu))
     for most, step, first, last in GRIDS:

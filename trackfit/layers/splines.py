@@ -15,6 +15,7 @@ tracks like the demonstration's did not settle.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from functools import partial
 from math import comb, factorial
 from typing import NamedTuple
@@ -144,7 +145,9 @@ def spline_jet(
     col, weights_x = _stencil(x_km, spline.origin_km[0], spline.spacing_km, nx - 2 * PADDING)
     row, weights_y = _stencil(y_km, spline.origin_km[1], spline.spacing_km, ny - 2 * PADDING)
     flat = spline.coefficients.reshape(-1)
-    offsets = np.asarray([i * nx + j for i in range(NODES) for j in range(NODES)])[:, None]
+    offsets = np.asarray([i * nx + j for i in range(NODES) for j in range(NODES)], np.int32)[
+        :, None
+    ]
     jets = []
     for component in range(components):
         corner = ((when.earlier * components + component) * ny + row) * nx + col
@@ -152,20 +155,15 @@ def spline_jet(
         if times > 1:
             later = _gather(flat, corner + offsets + components * ny * nx)
             nodes = nodes + when.weight * (later - nodes)
-        # the barriers keep XLA from gathering and contracting anew for every row of the jet
+        # the barrier keeps XLA from gathering anew for every row of the jet
         nodes = jax.lax.optimization_barrier(nodes)
-        along_x = jax.lax.optimization_barrier(
-            jnp.stack(
-                [
-                    jnp.stack(
-                        [
-                            _dot(weights_x[a], nodes[NODES * i : NODES * (i + 1)])
-                            for i in range(NODES)
-                        ]
-                    )
-                    for a in range(order + 1)
-                ]
-            )
+        along_x = jnp.stack(
+            [
+                jnp.stack(
+                    [_dot(weights_x[a], nodes[NODES * i : NODES * (i + 1)]) for i in range(NODES)]
+                )
+                for a in range(order + 1)
+            ]
         )
         rows = [_dot(weights_y[b], along_x[a]) / spline.spacing_km ** (a + b) for a, b in orders]
         jets.append(jnp.stack(rows))
@@ -178,7 +176,7 @@ def _gather(
     return flat.at[at].get(mode="promise_in_bounds")
 
 
-def _dot(weights: list[Array], values: Array) -> Array:
+def _dot(weights: Sequence[Array], values: Sequence[Array] | Array) -> Array:
     total = weights[0] * values[0]
     for weight, value in zip(weights[1:], values[1:], strict=True):
         total = total + weight * value
