@@ -1,7 +1,8 @@
-"""For all tests: shapes and types checked as they run, fixed seeds, one demonstration fitted once.
+"""For all tests: fixed seeds, one demonstration fitted once, and shapes checked where asked.
 
-Checked are the modules that work with arrays in the plane: all but study, results and report, whose
-structural types cannot be asked at run time.
+`CHECK_TYPES=1 python -m pytest` checks every annotation as it runs in the modules that work with
+arrays in the plane: all but study, results and report, whose structural types cannot be asked at
+run time. It is no part of a plain run while some annotations do not hold.
 """
 
 import os
@@ -14,7 +15,7 @@ import pytest
 from jaxtyping import install_import_hook
 
 CHECKED = "analysis errors fix_files fixes frame inference layers model motion paths responses"
-if os.environ.get("CHECK_TYPES"):  # TEMPORARY
+if os.environ.get("CHECK_TYPES"):
     install_import_hook([f"trackfit.{module}" for module in CHECKED.split()], "beartype.beartype")
 
 hypothesis.settings.register_profile("trackfit", deadline=None, derandomize=True)
