@@ -18,31 +18,43 @@ if TYPE_CHECKING:
         Prepared,
         fill_tracks,
         fit_tags,
+        fix_judgements,
         parameter_table,
         preference_responses,
         prepare,
     )
+    from trackfit.compare import Compared, compare_models
+    from trackfit.criticism import Criticism, criticise_fits
     from trackfit.errors import CLASS_SD_M, ErrorRules
     from trackfit.faults import FixesError, LayerError, ResultsError, StudyError, TrackfitError
     from trackfit.fixes import Fixes, read_fixes
     from trackfit.frame import Plane
+    from trackfit.hidden_fixes import HoldOutTrial, hold_out
     from trackfit.inference.fit import Fit, FitStatus
+    from trackfit.judged import Judged, judge_fits
+    from trackfit.judgement import FixJudgement
     from trackfit.layers import Coast, Layer
     from trackfit.outputs import write_results
     from trackfit.paths import FilledTrack
     from trackfit.responses import Response
     from trackfit.results import Results, read_results, to_geodataframe, to_pandas, to_xarray
     from trackfit.study import Study, read_study
+    from trackfit.verdicts import Verdict, verdicts_of
 
 _WHERE = {
     "CLASS_SD_M": "errors",
     "Coast": "layers",
+    "Compared": "compare",
+    "Criticism": "criticism",
     "ErrorRules": "errors",
     "FilledTrack": "paths",
     "Fit": "inference.fit",
     "FitStatus": "inference.fit",
+    "FixJudgement": "judgement",
     "Fixes": "fixes",
     "FixesError": "faults",
+    "HoldOutTrial": "hidden_fixes",
+    "Judged": "judged",
     "Layer": "layers",
     "LayerError": "faults",
     "Plane": "frame",
@@ -53,8 +65,14 @@ _WHERE = {
     "Study": "study",
     "StudyError": "faults",
     "TrackfitError": "faults",
+    "Verdict": "verdicts",
+    "compare_models": "compare",
+    "criticise_fits": "criticism",
     "fill_tracks": "analysis",
     "fit_tags": "analysis",
+    "fix_judgements": "analysis",
+    "hold_out": "hidden_fixes",
+    "judge_fits": "judged",
     "parameter_table": "analysis",
     "preference_responses": "analysis",
     "prepare": "analysis",
@@ -64,18 +82,24 @@ _WHERE = {
     "to_geodataframe": "results",
     "to_pandas": "results",
     "to_xarray": "results",
+    "verdicts_of": "verdicts",
     "write_results": "outputs",
 }
 
 __all__ = [
     "CLASS_SD_M",
     "Coast",
+    "Compared",
+    "Criticism",
     "ErrorRules",
     "FilledTrack",
     "Fit",
     "FitStatus",
+    "FixJudgement",
     "Fixes",
     "FixesError",
+    "HoldOutTrial",
+    "Judged",
     "Layer",
     "LayerError",
     "Plane",
@@ -86,8 +110,14 @@ __all__ = [
     "Study",
     "StudyError",
     "TrackfitError",
+    "Verdict",
+    "compare_models",
+    "criticise_fits",
     "fill_tracks",
     "fit_tags",
+    "fix_judgements",
+    "hold_out",
+    "judge_fits",
     "parameter_table",
     "preference_responses",
     "prepare",
@@ -97,6 +127,7 @@ __all__ = [
     "to_geodataframe",
     "to_pandas",
     "to_xarray",
+    "verdicts_of",
     "write_results",
 ]
 

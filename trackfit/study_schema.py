@@ -255,6 +255,22 @@ class Motion(Table):
         le=24,
     )
 
+    pace_log_sd: float = setting(
+        0.0,
+        "How much the pace of the movement changes in time: the standard deviation of its "
+        "logarithm from spell to spell. 0 keeps one pace; 0.5 lets it differ by a factor of 1.6 "
+        "either way. A varying pace makes regions wide where the animal is restless, narrow where "
+        "it is steady.",
+        ge=0,
+        le=3,
+    )
+    pace_hours: float = setting(
+        24.0,
+        "Length of a spell of one pace; paces of spells twice this apart are all but unrelated.",
+        unit="hours",
+        gt=0,
+    )
+
 
 class Point(Table):
     """A place, such as a colony."""
@@ -366,6 +382,14 @@ class Fit(Table):
     step_check: bool = setting(
         False, "Fit again with half the step and report how far the estimates move."
     )
+    points: int = setting(
+        128,
+        "Weighted points that stand for the parameters' posterior, which is often skewed; "
+        "estimates, intervals and positions average over them. 0 takes the plain normal "
+        "approximation, which is faster.",
+        ge=0,
+        le=8192,
+    )
     max_iterations: int = setting(100, "Longest search before it counts as not converged.", ge=1)
 
 
@@ -386,6 +410,12 @@ class Paths(Table):
         gt=0,
     )
     draws: int = setting(20, "Number of possible paths to draw for each tag.", ge=0, le=10_000)
+    keep_at_sea: bool | None = setting(
+        None,
+        "Keep positions and drawn paths off the land of `[coast]`: no position stands on it, no "
+        "drawn path crosses it. `false` for animals that fly or haul out.",
+        shown="true where there is a `[coast]`",
+    )
 
 
 class Output(Table):

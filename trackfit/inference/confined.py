@@ -3,7 +3,7 @@
 The target is the density of a block tridiagonal Gaussian, times a weight of each state, times one
 where every step is clear and zero where a step is not:
 
-    p(z) ~ N(z; centre, inv(H)) prod_i w_i(x_i) prod_i 1[x_i to x_(i+1) is clear].
+    p(z) ~ N(z; centre, inv(H)) prod_i w_i(z_i) prod_i 1[x_i to x_(i+1) is clear].
 
 A move holds some states, spaced evenly from a random start. The blocks between them are then
 independent. In each, with m the conditional mean and e a fresh conditional draw around it,
@@ -27,7 +27,9 @@ from jaxtyping import Bool, Float, Int
 
 from trackfit.inference.banded import Cholesky, factor
 
-MAX_SHRINKS = 20
+MAX_SHRINKS = 10
+"""Tries of a block: after so many the bracket is a few thousandths of a turn."""
+
 MEND_ROUNDS = 8
 
 
@@ -40,9 +42,9 @@ class Bounds(Protocol):
         """Tell which steps may be taken."""
 
     def log_weight(
-        self, xy_km: Float[np.ndarray, "m 2"], state: Int[np.ndarray, " m"]
+        self, states: Float[np.ndarray, "m dim"], number: Int[np.ndarray, " m"]
     ) -> Float[np.ndarray, " m"]:
-        """Logarithm of the weight of being at some places, for the states of those numbers."""
+        """Logarithm of the weight of some states, given their numbers along the path."""
 
 
 @dataclass
@@ -59,6 +61,8 @@ class Paths:
         What each path is drawn around, and its deviation from that.
     held
         Whether the first and the last state stay where they are.
+    longest
+        Longest block, in states, that is worth moving as one.
     """
 
     bands: Float[np.ndarray, "groups states dim 2*dim"]
@@ -66,11 +70,17 @@ class Paths:
     centre: Float[np.ndarray, "paths states dim"]
     deviation: Float[np.ndarray, "paths states dim"]
     held: tuple[bool, bool]
+    longest: int
 
     def some(self, rows: Int[np.ndarray, " some"]) -> Paths:
         """A copy of some of the paths."""
         return Paths(
-            self.bands, self.group[rows], self.centre[rows], self.deviation[rows], self.held
+            self.bands,
+            self.group[rows],
+            self.centre[rows],
+            self.deviation[rows],
+            self.held,
+            self.longest,
         )
 
     @property
@@ -84,6 +94,10 @@ class Paths:
         paths, states, _ = xy.shape
         start, end = xy[:, :-1].reshape(-1, 2), xy[:, 1:].reshape(-1, 2)
         return bounds.clear(start, end).reshape(paths, states - 1)
+
+    def all_clear(self, bounds: Bounds) -> Bool[np.ndarray, " paths"]:
+        """Tell which paths are clear all along."""
+        return np.asarray(self.clear(bounds).all(axis=1))
 
 
 class _Part(NamedTuple):
@@ -181,9 +195,9 @@ class _Layout:
         return Conditional.of(paths, np.repeat(self.held[:, None], dim, axis=1))
 
 
-def block_lengths(states: int) -> list[int]:
-    """Lengths of the blocks of one sweep: 1, 3, 9, ... and the whole stretch."""
-    return [3**k for k in range(20) if 3**k < states] + [states]
+def block_lengths(longest: int) -> list[int]:
+    """Lengths of the blocks of one sweep: 1, 4, 16, ... and the longest."""
+    return [4**k for k in range(20) if 4**k < longest] + [longest]
 
 
 def sweep(
@@ -198,7 +212,7 @@ def sweep(
     bounds do not matter they stay close to the paths, and their law is known.
     """
     states = paths.centre.shape[1]
-    for length in block_lengths(states):
+    for length in block_lengths(paths.longest):
         layout = _Layout.drawn(states, length, paths.held, rng)
         given = layout.conditional(paths)
         noise = given.noise(len(paths.deviation), rng)
@@ -234,9 +248,8 @@ def _slice(
         trial[path, state] = (
             mean[path, state] + away[path, state] * np.cos(turn) + noise[path, state] * np.sin(turn)
         )
-        failed = _bad_steps(paths, trial, bounds, layout, pending) > 0
-        failed |= _block_weight(paths, trial, bounds, layout, pending) < level
-        pending &= failed
+        clear = pending & (_bad_steps(paths, trial, bounds, layout, pending) == 0)
+        pending &= ~clear | (_block_weight(paths, trial, bounds, layout, clear) < level)
         low = np.where(angle < 0.0, angle, low)
         high = np.where(angle < 0.0, high, angle)
         angle = np.where(pending, rng.uniform(low, high), angle)
@@ -270,9 +283,9 @@ def _block_weight(
 ) -> Float[np.ndarray, "paths blocks"]:
     """Log weight of the free states of some of the blocks; zero elsewhere."""
     path, state = np.nonzero(which[:, layout.block] & ~layout.held)
-    xy = paths.centre[path, state, :2] + deviation[path, state, :2]
+    at = paths.centre[path, state] + deviation[path, state]
     flat = path * layout.blocks + layout.block[state]
-    weight = np.bincount(flat, bounds.log_weight(xy, state), minlength=which.size)
+    weight = np.bincount(flat, bounds.log_weight(at, state), minlength=which.size)
     return weight.reshape(which.shape)
 
 
@@ -287,8 +300,8 @@ def mend(
     `sweep`.
     """
     states = paths.centre.shape[1]
-    for length in [n for n in block_lengths(states) for _ in range(2)] * MEND_ROUNDS:
-        rows = np.flatnonzero(~paths.clear(bounds).all(axis=1))
+    for length in [n for n in block_lengths(paths.longest) for _ in range(2)] * MEND_ROUNDS:
+        rows = np.flatnonzero(~paths.all_clear(bounds))
         if not rows.size:
             return
         layout = _Layout.drawn(states, length, paths.held, rng)

@@ -137,7 +137,10 @@ def approximate(
         sites = observations.gaussian_sites(problem.error_parameters(theta)[0])
         mode = find_mode(problem, theta, sites, warm.states, tolerance)
         return Approximation(problem, mode, None, None, None, 0)
-    return _propagate(problem, theta, warm, tolerance, site_tolerance)
+    try:
+        return _propagate(problem, theta, warm, tolerance, site_tolerance)
+    except np.linalg.LinAlgError:
+        raise ModeNotFound("a site's moments are not finite or not positive definite") from None
 
 
 @dataclass

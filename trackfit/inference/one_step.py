@@ -102,13 +102,13 @@ def _linearised(
     Float[np.ndarray, "dim dim"],
 ]:
     """Jacobians, residuals and noise of all steps; mean (as deviation) and covariance of z_0."""
-    problem = found.problem
-    z, count = problem.padded_states(found.mode.states), problem.n_states - 1
+    problem, point = found.problem, found.mode.point
+    count = problem.n_states - 1
     linear = linear_steps(
         problem.motion,
         problem.process_parameters(found.theta),
-        z,
-        problem.basis(z, order=2),
+        point.z,
+        point.basis,
         problem.track,
     )
     jacobian, residual, weight = (

@@ -18,6 +18,9 @@ from trackfit.inference.observations import LOG_2PI
 from trackfit.inference.sites import determinant, inverse_2x2
 from trackfit.inference.tails import LOG_WEIGHT_STEP, LOG_WEIGHTS
 
+CLOSER_FROM_NU = 5.0
+"""Above so many degrees of freedom nodes are drawn together; masses then add up to 1 to 1e-9."""
+
 
 @dataclass(frozen=True)
 class Predicted:
@@ -89,18 +92,21 @@ def error_mixture(
 ) -> tuple[Float[np.ndarray, " nodes"], Float[np.ndarray, " nodes"]]:
     """Weights w at which errors are N(0, s^2 C / w), and the logarithms of their masses.
 
-    Quadrature nodes in log w of w ~ Gamma(nu/2, nu/2); one weight of one for normal errors.
+    Quadrature nodes in log w of w ~ Gamma(nu/2, nu/2); one weight of one for normal errors. Large
+    nu make log w narrow, and the nodes are drawn together as its standard deviation falls.
     """
     if log_nu is None:
         return np.ones(1), np.zeros(1)
     half = 0.5 * np.exp(log_nu)
+    narrowed = min(1.0, float(np.sqrt(CLOSER_FROM_NU / (2.0 * half))))
+    log_weights = narrowed * LOG_WEIGHTS
     log_mass = (
-        np.log(LOG_WEIGHT_STEP)
+        np.log(narrowed * LOG_WEIGHT_STEP)
         + half * np.log(half)
         - gammaln(half)
-        + half * (LOG_WEIGHTS - np.exp(LOG_WEIGHTS))
+        + half * (log_weights - np.exp(log_weights))
     )
-    return np.exp(LOG_WEIGHTS), log_mass
+    return np.exp(log_weights), log_mass
 
 
 def _residuals(
