@@ -12,9 +12,9 @@ paths keep off the shore, the more the shorter the step and the longer the gap: 
 are Brownian motion conditioned never to arrive. With 1/Z the limit is motion reflected at the shore
 (`trackfit.sea_bounds` has Z).
 
-Draws are made by `trackfit.inference.confined`. What is approximate: sweeps are finitely many; Z is
-that of a straight shore; the engine's linearisation and, for heavy tails, its Gaussian stand-ins of
-the fixes are kept; the parameters stay those fitted without a coast; ways round an island are
+Draws are made by `trackfit.inference.confined`. What is approximate: sweeps are finitely many; Z
+asks only where a step ends; the engine's linearisation and, for heavy tails, its Gaussian stand-ins
+of the fixes are kept; the parameters stay those fitted without a coast; ways round an island are
 weighed only as far as draws find them.
 """
 
@@ -34,7 +34,7 @@ from trackfit.inference.fit import Drawn, States
 from trackfit.inference.twins import TwinSums, medoid, squared_radius
 from trackfit.layers.layer import Box, Coast
 from trackfit.layers.shore import Shore, widened
-from trackfit.sea_bounds import WEIGHED_SD, SeaBounds, Strides
+from trackfit.sea_bounds import SeaBounds, Strides
 from trackfit.sea_route import SeaGraph, led_by_sea
 
 REACH_SD = 4.291932052578694
@@ -138,8 +138,7 @@ def keep_at_sea(states: States, coast: Coast, drawn: Sequence[Drawn], seed: Sequ
     if not near.any() or len(near) < 2:
         return _kept(free, moved, (), land)
     strides = Strides.of(states)
-    reach = WEIGHED_SD * float(strides.sd_km[near[:-1] | near[1:]].max())
-    shore = Shore.over(land, _box(free, near), reach)
+    shore = Shore.over(land, _box(free, near))
     of_draws, of_positions = (np.random.default_rng([*seed, k]) for k in (1, 2))
     behind = states.drawn(PATHS, of_positions, most_points=POINTS)
     kept = free.part(slice(None))
@@ -365,7 +364,7 @@ class _Confiner:
         around = np.where(adjusted[:, None, None], around, free.covariance_km2)
         ashore = np.flatnonzero(~self.sea.shore.afloat(xy))
         for state in ashore:
-            middle = medoid(paths_km[:, state])
+            middle = medoid(paths_km[:, state], pairs_km[0, :, state])
             off = xy[state] - middle
             xy[state], around[state] = middle, around[state] + np.outer(off, off)
         adjusted[ashore] = True

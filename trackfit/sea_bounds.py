@@ -7,13 +7,14 @@ from dataclasses import dataclass
 import jax.numpy as jnp
 import numpy as np
 from jaxtyping import Bool, Float, Int
-from scipy.special import log_ndtr
 
 from trackfit.inference.fit import States
 from trackfit.layers.shore import Shore
 
 WEIGHED_SD = 4.5
 """A step that is expected to end farther off land than so many of its sds has the weight one."""
+
+LEAST_SHARE = 1e-12
 
 
 @dataclass(frozen=True)
@@ -55,8 +56,8 @@ class Strides:
 class SeaBounds:
     """Steps at sea, and the weight 1/Z of a state whose next step must end there.
 
-    Z is the probability that a free step would, for a straight shore: Phi(d/s), with d the distance
-    off land of the place where the step is expected to end (negative inland) and s its sd.
+    Z is the probability that a free step would (`Shore.share_at_sea` around the place where the
+    step is expected to end). It asks where the step ends only, not what lies in between.
     """
 
     shore: Shore
@@ -81,6 +82,6 @@ class SeaBounds:
             next_km = next_km + states[steps, 2:] * self.strides.glide_hours[number, None]
         sd = self.strides.sd_km[number]
         close = np.flatnonzero(self.shore.room_at(next_km) < WEIGHED_SD * sd)
-        offing = self.shore.offing_at(next_km[close])
-        weight[steps[close]] = -log_ndtr(offing / sd[close])
+        share = self.shore.share_at_sea(next_km[close], sd[close])
+        weight[steps[close]] = -np.log(np.maximum(share, LEAST_SHARE))
         return weight

@@ -75,7 +75,9 @@ def squared_radius(
     return np.quantile(np.einsum("pni,nij,pnj->pn", off, inverse, off), probability, axis=0)
 
 
-def medoid(xy: Float[np.ndarray, "n 2"]) -> Float[np.ndarray, " 2"]:
-    """The point with the least mean distance to all the others."""
-    apart = np.hypot(*(xy[:, None] - xy[None]).transpose(2, 0, 1))
-    return xy[int(np.argmin(apart.mean(axis=1)))]
+def medoid(
+    candidates_km: Float[np.ndarray, "n 2"], cloud_km: Float[np.ndarray, "m 2"]
+) -> Float[np.ndarray, " 2"]:
+    """The candidate with the least mean distance to a cloud of points."""
+    apart = np.hypot(*(candidates_km[:, None] - cloud_km[None]).transpose(2, 0, 1))
+    return candidates_km[int(np.argmin(apart.mean(axis=1)))]

@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 import shapely
 from jaxtyping import Bool, Float
 from rasterio.features import rasterize
 from rasterio.transform import Affine
-from scipy.ndimage import distance_transform_edt
+from scipy.ndimage import distance_transform_edt, gaussian_filter
 from scipy.spatial import cKDTree
+from scipy.special import ndtr
 from shapely.geometry.base import BaseGeometry
 
 from trackfit.layers.layer import Box, Coast
@@ -21,6 +22,10 @@ coordinates differ by less. Straits narrower than twice this are closed."""
 
 CELLS = 512
 LEAST_CELL_KM = 0.005
+EXACT_CELLS = 9.0
+
+LEAST_SPREAD_CELLS = 2.0
+"""Steps that spread by less than so many cells see a straight shore."""
 
 
 def widened(coast: Coast) -> BaseGeometry:
@@ -44,8 +49,8 @@ class Shore:
         How far every point of a cell is from land at least; 0 where the cell may touch the shore,
         -1 where it lies inside land.
     offing_km
-        Distance of the cells' centres to the shore, negative inland: exact as far off as asked,
-        to about a third of a cell beyond.
+        Distance of the cells' centres to the shore, negative inland: exact within `EXACT_CELLS`
+        of it, to about a third of a cell beyond.
     """
 
     land: BaseGeometry
@@ -54,12 +59,13 @@ class Shore:
     cell_km: float
     room_km: Float[np.ndarray, "ny nx"]
     offing_km: Float[np.ndarray, "ny nx"]
+    _shares: dict[int, Float[np.ndarray, "ny nx"]] = field(default_factory=dict, repr=False)
 
     @classmethod
-    def over(cls, land: BaseGeometry, box: Box, offing_km: float = 0.0) -> Shore:
+    def over(cls, land: BaseGeometry, box: Box) -> Shore:
         """Lay the raster over a box; land outside it is known all the same, only more slowly.
 
-        `land` is what `widened` makes of a coast; `offing_km` how far off distances must be exact.
+        `land` is what `widened` makes of a coast.
         """
         cell = max(box.x_max - box.x_min, box.y_max - box.y_min) / CELLS
         cell = max(cell, LEAST_CELL_KM)
@@ -76,7 +82,7 @@ class Shore:
         # the outermost cells also stand for all that lies outside the box
         room[[0, -1]], room[:, [0, -1]] = 0.0, 0.0
         offing = (_cells_to(inside) - _cells_to(~inside)) * cell
-        close = np.nonzero(np.abs(offing) < offing_km + 2.0 * cell)
+        close = np.nonzero(np.abs(offing) < (EXACT_CELLS + 1.0) * cell)
         centres = np.column_stack([close[1], close[0]]) * cell + [box.x_min, box.y_min]
         offing[close] = np.copysign(_to_outline(land, centres, cell), offing[close])
         return cls(land, box.x_min, box.y_min, cell, room, offing)
@@ -112,14 +118,45 @@ class Shore:
 
     def offing_at(self, xy_km: Float[np.ndarray, "n 2"]) -> Float[np.ndarray, " n"]:
         """Distance to the shore, between cells by bilinear interpolation; the box's edge beyond."""
-        ny, nx = self.offing_km.shape
+        return self._between_cells(self.offing_km, xy_km)
+
+    def share_at_sea(
+        self, xy_km: Float[np.ndarray, "n 2"], sd_km: Float[np.ndarray, " n"]
+    ) -> Float[np.ndarray, " n"]:
+        """Share of normal steps from points, of some sd along either axis, that end at sea.
+
+        From rasters of the sea smoothed by that sd, between rasters a factor sqrt(2) apart by
+        interpolation; for short steps and far inland Phi(offing / sd), as for a straight shore.
+        """
+        share = ndtr(self.offing_at(xy_km) / sd_km)
+        level = np.maximum(2.0 * np.log2(sd_km / (LEAST_SPREAD_CELLS * self.cell_km)), -1.0)
+        lower = np.floor(level).astype(int)
+        for k in np.unique(lower[lower >= 0]):
+            at = np.flatnonzero(lower == k)
+            low, high = (self._between_cells(self._share(k + j), xy_km[at]) for j in (0, 1))
+            found = low + (level[at] - k) * (high - low)
+            share[at] = np.where(found > 0.01, found, np.minimum(share[at], 0.01))
+        return share
+
+    def _share(self, level: int) -> Float[np.ndarray, "ny nx"]:
+        """The sea, smoothed; a cell on the shore counts by the part of it that is sea."""
+        if level not in self._shares:
+            sea = np.clip(self.offing_km / self.cell_km + 0.5, 0.0, 1.0)
+            spread = LEAST_SPREAD_CELLS * 2.0 ** (level / 2.0)
+            self._shares[level] = gaussian_filter(sea, spread, mode="nearest")
+        return self._shares[level]
+
+    def _between_cells(
+        self, raster: Float[np.ndarray, "ny nx"], xy_km: Float[np.ndarray, "n 2"]
+    ) -> Float[np.ndarray, " n"]:
+        ny, nx = raster.shape
         column = np.clip((xy_km[:, 0] - self.x0_km) / self.cell_km, 0, nx - 1.001)
         row = np.clip((xy_km[:, 1] - self.y0_km) / self.cell_km, 0, ny - 1.001)
         left, low = column.astype(np.intp), row.astype(np.intp)
         right, up = column - left, row - low
-        corner, offing = low * nx + left, self.offing_km.ravel()
-        below = offing[corner] * (1.0 - right) + offing[corner + 1] * right
-        above = offing[corner + nx] * (1.0 - right) + offing[corner + nx + 1] * right
+        corner, flat = low * nx + left, raster.ravel()
+        below = flat[corner] * (1.0 - right) + flat[corner + 1] * right
+        above = flat[corner + nx] * (1.0 - right) + flat[corner + nx + 1] * right
         return below * (1.0 - up) + above * up
 
 
