@@ -58,10 +58,10 @@ def check(study_file: Path, quiet: bool) -> None:
 @_QUIET
 @_OVERWRITE
 def fit(study_file: Path, quiet: bool, overwrite: bool) -> ExitCode:
-    """Estimate the parameters of every tag, no more.
+    """Estimate the parameters of every tag, and judge the fit.
 
-    Prints the table of parameters, and writes it with the record of the fit (parameters.csv,
-    results.json) to the output folder.
+    Prints the table of parameters and what to think of each fit, and writes both with the record
+    (parameters.csv, verdicts.csv, results.json) to the output folder.
     """
     import trackfit
 
@@ -72,11 +72,28 @@ def fit(study_file: Path, quiet: bool, overwrite: bool) -> ExitCode:
 @_STUDY
 @_QUIET
 @_OVERWRITE
+def compare(study_file: Path, quiet: bool, overwrite: bool) -> ExitCode:
+    """Fit both motions to every tag, and say which does better.
+
+    Fits the study's own model and the other motion; with "terms = true" in the study's [compare]
+    table also the model without each term. Prints the scores and a sentence for each, and writes
+    them (comparison.csv) with all that "trackfit fit" writes to the output folder.
+    """
+    import trackfit
+
+    study = trackfit.read_study(study_file)
+    return _fit_and_write(study, quiet, overwrite, fill=False, compare=True)
+
+
+@_command
+@_STUDY
+@_QUIET
+@_OVERWRITE
 def run(study_file: Path, quiet: bool, overwrite: bool) -> ExitCode:
     """Do all that STUDY asks: fit, fill, write.
 
     Fits every tag, fills the tracks, and writes tables, maps and figures to the output folder.
-    Prints the table of parameters and the folder of the results.
+    Prints the table of parameters, what to think of each fit, and the folder of the results.
     """
     import trackfit
 
@@ -106,10 +123,13 @@ def demo(folder: Path, quiet: bool, overwrite: bool) -> ExitCode:
     return ended
 
 
-def _fit_and_write(study: "Study", quiet: bool, overwrite: bool, *, fill: bool) -> ExitCode:
+def _fit_and_write(
+    study: "Study", quiet: bool, overwrite: bool, *, fill: bool, compare: bool = False
+) -> ExitCode:
     import trackfit
+    from trackfit.study_trials import Compare
 
-    from .words import convergence, parameter_table, step_check_table
+    from .words import convergence, findings, parameter_table, step_check_table
 
     story = Story(quiet=quiet)
     replace = _may_replace(study.output_folder, overwrite)
@@ -117,9 +137,19 @@ def _fit_and_write(study: "Study", quiet: bool, overwrite: bool, *, fill: bool) 
     _tell(story, prepared.notes, prepared.warnings)
     with story.progress() as progress:
         fits = trackfit.fit_tags(prepared, progress=progress)
+        judged = trackfit.judge_fits(
+            prepared,
+            fits,
+            compare=study.compare or (Compare() if compare else None),
+            progress=progress,
+        )
     filled = trackfit.fill_tracks(prepared, fits) if fill else []
-    folder = trackfit.write_results(study.output_folder, prepared, fits, filled, overwrite=replace)
+    _tell(story, (), [warning for track in filled for warning in track.warnings])
+    folder = trackfit.write_results(
+        study.output_folder, prepared, fits, filled, judged=judged, overwrite=replace
+    )
     click.echo("\n".join([*parameter_table(fits), *step_check_table(fits)]))
+    click.echo("\n".join(findings(judged)))
     click.echo(f"\n{convergence(fits)}\nResults: {folder}")
     return _ended(fits)
 

@@ -8,6 +8,9 @@ import pandas as pd
 
 if TYPE_CHECKING:
     from trackfit.analysis import Prepared
+    from trackfit.criticism.compare import Compared
+    from trackfit.criticism.hidden_fixes import HoldOutTrial
+    from trackfit.criticism.judged import Judged
     from trackfit.fixes import Fixes
     from trackfit.frame import Plane
     from trackfit.inference.fit import Fit
@@ -67,6 +70,72 @@ def convergence(fits: "Sequence[Fit]") -> str:
     """Say how many fits converged."""
     good = sum(fit.status.ok for fit in fits)
     return f"{good} of {len(fits)} fits converged."
+
+
+def findings(judged: "Judged") -> list[str]:
+    """Return the lines that say what to think of every fit.
+
+    Of what is as it should be only one line is said for each tag; all stands in verdicts.csv.
+    """
+    lines: list[str] = []
+    for criticism in judged.criticisms:
+        lines += ["", f"Tag {criticism.tag}:", *_verdicts(judged, criticism.tag)]
+    if judged.comparison:
+        lines += ["", *_comparison(judged.comparison)]
+    if judged.trial is not None:
+        lines += ["", *_trial(judged.trial)]
+    return lines
+
+
+def _verdicts(judged: "Judged", tag: str) -> list[str]:
+    fine = ("errors as stated", "tails as expected", "motion fits")
+    verdicts = judged.of(tag)
+    told = [f"  {v.sentence}" for v in verdicts if v.finding.value not in fine]
+    plain = [v.about for v in verdicts if v.finding.value in fine]
+    if plain:
+        told.insert(0, f"  Nothing speaks against the model's {_listed(plain)}.")
+    return told
+
+
+def _listed(words: Sequence[str]) -> str:
+    return " and ".join(([", ".join(words[:-1])] if words[:-1] else []) + [words[-1]])
+
+
+def _comparison(rows: "Sequence[Compared]") -> list[str]:
+    cells = [
+        [
+            f"{row.tag} {row.model}",
+            *("" if row.scores is None else f"{x:.1f}" for x in _of_scores(row)),
+            *("" if np.isnan(x) else f"{x:+.1f}" for x in _differences(row)),
+        ]
+        for row in rows
+    ]
+    header = [
+        "tag and model",
+        "log marginal",
+        "AIC",
+        "leave-one-out",
+        "AIC less own",
+        "l.o.o. less",
+    ]
+    told = [f"{row.tag}: {row.sentence}" for row in rows if row.outcome.name != "OWN"]
+    return [*columns(header, cells), "", *told]
+
+
+def _of_scores(row: "Compared") -> tuple[float, ...]:
+    scores = row.scores
+    if scores is None:
+        return (np.nan, np.nan, np.nan)
+    return (scores.log_marginal, scores.aic, scores.leave_one_out)
+
+
+def _differences(row: "Compared") -> tuple[float, float]:
+    return row.aic_difference, row.leave_one_out_difference
+
+
+def _trial(trial: "HoldOutTrial") -> list[str]:
+    rows = trial.tags if len(trial.tags) == 1 else (*trial.tags, trial.pooled)
+    return [f"{row.tag}: {row.sentence}" for row in rows]
 
 
 def description(prepared: "Prepared") -> list[str]:

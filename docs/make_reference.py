@@ -6,6 +6,7 @@ and the exit code tells whether a page is stale.
 
 import sys
 from collections.abc import Callable, Iterator
+from datetime import datetime
 from pathlib import Path
 from typing import Any, get_args, get_origin
 
@@ -15,7 +16,7 @@ from pydantic.fields import FieldInfo
 from trackfit_cli.app import app
 
 from trackfit.study import Study
-from trackfit.study_faults import plain_type, tables
+from trackfit.study_faults import keys_of, plain_type, tables
 
 HERE = Path(__file__).parent
 WIDTH = 88
@@ -90,7 +91,7 @@ def _rows(table: type[BaseModel]) -> Iterator[str]:
     yield "| key | value | default | meaning |"
     yield "|---|---|---|---|"
     inner = {header.strip("[]") for header, _ in tables(table)}
-    for name, field in table.model_fields.items():
+    for name, field in keys_of(table).items():
         meaning = field.description or ""
         if name in inner:
             meaning += " See the table of its own below."
@@ -114,6 +115,7 @@ _KINDS: dict[Any, str] = {
     float: "number",
     bool: "`true` or `false`",
     Path: "path",
+    datetime: "date and time",
 }
 
 

@@ -28,6 +28,10 @@ class Track:
     table: pd.DataFrame
     draws_lonlat: np.ndarray
 
+    @property
+    def draw_times(self):
+        return pd.DatetimeIndex(self.table["time"])
+
 
 @dataclass(frozen=True)
 class OneFit:
@@ -88,6 +92,7 @@ def wandering_track(tag="seal 7", start=(-5.0, 56.0), hours=96, draws=5, seed=3,
             "hours_to_fix": np.where(gap, 6.0 * swell, 0.25),
             "in_gap": gap,
             "at_fix": ~gap & (np.arange(hours) % 2 == 0),
+            "coast_adjusted": np.arange(hours) % 5 == 1,
             **axes,
         }
     )

@@ -26,11 +26,17 @@ from trackfit_cli.exits import EXIT_CODES, ExitCode
 
 import trackfit
 from trackfit import faults
+from trackfit.criticism.compare import Compared, Outcome
+from trackfit.criticism.criticism import Scores
+from trackfit.criticism.hidden_fixes import HeldOut, HoldOutTrial
+from trackfit.criticism.judged import Judged
+from trackfit.criticism.verdicts import Finding, Verdict
 from trackfit.faults import LayerError, TrackfitError
 from trackfit.frame import Plane
 from trackfit.inference.fit import FitStatus
 from trackfit.study import Study, read_study
 from trackfit.study_faults import RULES
+from trackfit.study_trials import Compare
 
 ROOT = Path(__file__).parent.parent
 DOCS = ROOT / "docs"
@@ -77,6 +83,9 @@ class FakeLibrary:
     reasons: tuple[str, ...] = ("lat is missing", "lat is missing", "lon is missing")
     calls: list[str] = field(default_factory=list)
     written: dict[str, Any] = field(default_factory=dict)
+    compared: Any = None
+    comparison: tuple[Compared, ...] = ()
+    trial: HoldOutTrial | None = None
 
     def prepare(self, study: Study) -> SimpleNamespace:
         self.calls.append("prepare")
@@ -118,15 +127,44 @@ class FakeLibrary:
             for t, check in (("A1", moved), ("B2", None))
         ]
 
-    def fill_tracks(self, prepared: Any, fits: list[Any]) -> list[str]:
+    def judge_fits(
+        self,
+        prepared: SimpleNamespace,
+        fits: list[SimpleNamespace],
+        *,
+        compare: Any,
+        progress: Callable[[str, float, str], None],
+    ) -> Judged:
+        self.calls.append("judge_fits")
+        self.compared = compare
+        verdicts = (
+            Verdict("A1", "errors", Finding.ERRORS_AS_STATED, 1.0, "The GPS sds fit the track."),
+            Verdict("A1", "tails", Finding.TAILS_AS_EXPECTED, 3.0, "Nothing is far off."),
+            Verdict("B2", "motion", Finding.MOTION_TOO_ROUGH, 0.4, "The motion is too rough."),
+        )
+        criticisms = tuple(SimpleNamespace(tag=tag) for tag in ("A1", "B2"))
+        return Judged(criticisms, verdicts, self.comparison, self.trial)
+
+    def fill_tracks(self, prepared: Any, fits: list[Any]) -> list[SimpleNamespace]:
         self.calls.append("fill_tracks")
-        return [fit.tag for fit in fits]
+        return [SimpleNamespace(tag=fit.tag, warnings=()) for fit in fits]
 
     def write_results(
-        self, folder: Path, prepared: Any, fits: Any, filled: Any, *, overwrite: bool
+        self,
+        folder: Path,
+        prepared: Any,
+        fits: Any,
+        filled: Any,
+        *,
+        judged: Judged,
+        overwrite: bool,
     ) -> Path:
         self.calls.append("write_results")
-        self.written = {"folder": folder, "filled": list(filled), "overwrite": overwrite}
+        self.written = {
+            "folder": folder,
+            "filled": [track.tag for track in filled],
+            "overwrite": overwrite,
+        }
         return folder
 
 
@@ -134,7 +172,7 @@ class FakeLibrary:
 def library(monkeypatch: pytest.MonkeyPatch) -> FakeLibrary:
     fake = FakeLibrary()
     monkeypatch.setattr(trackfit, "read_study", read_study, raising=False)
-    for name in ("prepare", "fit_tags", "fill_tracks", "write_results"):
+    for name in ("prepare", "fit_tags", "judge_fits", "fill_tracks", "write_results"):
         monkeypatch.setattr(trackfit, name, getattr(fake, name), raising=False)
     return fake
 
@@ -261,7 +299,7 @@ def test_the_traceback_shows_when_asked_for(
     assert "ZeroDivisionError: inner words" in capsys.readouterr().err
 
 
-@pytest.mark.parametrize("command", [[], ["check"], ["fit"], ["run"], ["demo"]])
+@pytest.mark.parametrize("command", [[], ["check"], ["fit"], ["compare"], ["run"], ["demo"]])
 @pytest.mark.parametrize("flag", ["-h", "--help"])
 def test_each_help_lists_the_exit_codes(
     command: list[str], flag: str, capsys: pytest.CaptureFixture[str]
@@ -347,7 +385,7 @@ def test_run_does_everything_and_prints_the_answer(
     assert trackfit_cli.main(["run", study]) == 0
     out, err = capsys.readouterr()
     folder = Path(study).parent / "results"
-    assert library.calls == ["prepare", "fit_tags", "fill_tracks", "write_results"]
+    assert library.calls == ["prepare", "fit_tags", "judge_fits", "fill_tracks", "write_results"]
     assert library.written == {"folder": folder, "filled": ["A1", "B2"], "overwrite": False}
     assert re.search(r"^A1 diffusion +1\.235 +0\.1 +1\.05 +1\.45 +km h\^-1/2$", out, re.MULTILINE)
     assert re.search(r"^B2 error_scale +2 +fixed +1$", out, re.MULTILINE)
@@ -358,8 +396,61 @@ def test_run_does_everything_and_prints_the_answer(
 
 def test_fit_fills_nothing(library: FakeLibrary, study: str) -> None:
     assert trackfit_cli.main(["fit", study]) == 0
-    assert library.calls == ["prepare", "fit_tags", "write_results"]
+    assert library.calls == ["prepare", "fit_tags", "judge_fits", "write_results"]
     assert library.written["filled"] == []
+
+
+def test_fit_says_of_each_tag_what_to_think_of_it(
+    library: FakeLibrary, study: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert trackfit_cli.main(["fit", study]) == 0
+    lines = capsys.readouterr().out.splitlines()
+    at = lines.index("Tag A1:")
+    assert lines[at + 1] == "  Nothing speaks against the model's errors and tails."
+    assert lines[lines.index("Tag B2:") + 1] == "  The motion is too rough."
+    assert library.compared is None
+
+
+def test_compare_fits_both_motions_even_where_the_study_asks_for_no_comparison(
+    library: FakeLibrary, study: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    scores = Scores(40, 2, -100.25, 204.5, 204.75, -90.5)
+    library.comparison = (
+        Compared("A1", "as in the study", "diffusive", FitStatus.CONVERGED, Outcome.OWN,
+                 scores, 0.0, 0.0, 0.0, "The study's own model."),
+        Compared("A1", "persistent motion", "persistent", FitStatus.NO_MODE, Outcome.NOT_FITTED,
+                 None, np.nan, np.nan, np.nan, "With persistent motion: no comparison."),
+    )  # fmt: skip
+    assert trackfit_cli.main(["compare", study]) == 0
+    assert library.compared == Compare(motions=True, terms=False)
+    assert "fill_tracks" not in library.calls
+    lines = capsys.readouterr().out.splitlines()
+    assert any(
+        re.fullmatch(r"A1 as in the study +-100\.2 +204\.5 +-90\.5 +\+0\.0 +\+0\.0", line)
+        for line in lines
+    )
+    assert "A1 persistent motion" in lines
+    assert "A1: With persistent motion: no comparison." in lines
+
+
+def test_compare_takes_what_the_study_asks_to_compare(library: FakeLibrary, study: str) -> None:
+    with Path(study).open("a", encoding="utf-8") as file:
+        file.write("[compare]\nterms = true\nmotions = false\n")
+    assert trackfit_cli.main(["compare", study]) == 0
+    assert library.compared == Compare(motions=False, terms=True)
+
+
+def test_hidden_fixes_are_told_by_tag_and_together(
+    library: FakeLibrary, study: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    def held(tag: str, sentence: str) -> HeldOut:
+        return HeldOut(tag, None, 9, 1, *[0.5] * 8, sentence)
+
+    tags = (held("A1", "One."), held("B2", "Two."))
+    library.trial = HoldOutTrial(tags, held("all tags", "Three."), pd.DataFrame())
+    assert trackfit_cli.main(["run", study]) == 0
+    lines = capsys.readouterr().out.splitlines()
+    assert lines[-6:-3] == ["A1: One.", "B2: Two.", "all tags: Three."]
 
 
 def test_quiet_says_nothing_on_stderr(
@@ -397,7 +488,7 @@ def test_columns_of_an_empty_table_are_its_header() -> None:
 # No overwriting without being told ----------------------------------------------------------------
 
 
-@pytest.mark.parametrize("command", ["fit", "run"])
+@pytest.mark.parametrize("command", ["fit", "compare", "run"])
 def test_results_that_are_there_stay_unless_told(
     library: FakeLibrary, study: str, command: str, capsys: pytest.CaptureFixture[str]
 ) -> None:
@@ -494,7 +585,7 @@ def test_demo_runs_the_copy_and_says_where_to_look(
     study_file = Path("trackfit-demo") / "study.toml"
     assert f"Results: {tmp_path / 'trackfit-demo' / 'results'}" in out
     assert f"trackfit run {study_file} --overwrite" in out
-    assert library.calls == ["prepare", "fit_tags", "fill_tracks", "write_results"]
+    assert library.calls == ["prepare", "fit_tags", "judge_fits", "fill_tracks", "write_results"]
     assert trackfit_cli.main(["demo"]) == 1
     assert trackfit_cli.main(["demo", "--overwrite"]) == 0
 
@@ -591,11 +682,11 @@ def test_a_stale_page_is_told(
 
 def test_the_study_page_names_every_key() -> None:
     page = (DOCS / "study-file.md").read_text(encoding="utf-8")
-    from trackfit.study_faults import tables
+    from trackfit.study_faults import keys_of, tables
 
     for header, table in tables(Study):
         assert f"## `{header}`\n" in page
-        for name in table.model_fields:
+        for name in keys_of(table):
             assert f"\n| `{name}` | " in page
 
 
@@ -649,7 +740,7 @@ def test_messages_has_every_reason_for_setting_a_fix_aside() -> None:
 def rules_of_the_study() -> set[str]:
     """Every rule a study can break: of the schema, of single values, and between tables."""
     found = {piece for rule in RULES.values() for piece in rule.split("{")[:1] if piece}
-    for name in ("study", "study_schema", "study_values"):
+    for name in ("study", "study_schema", "study_screening", "study_trials", "study_values"):
         for node in ast.walk(ast.parse((ROOT / "trackfit" / f"{name}.py").read_text("utf-8"))):
             if isinstance(node, ast.Call) and ast.unparse(node.func) == "refuse":
                 found.update(fixed_words(node.args[0]))

@@ -25,17 +25,21 @@ ORDER = (
     ("layers",),
     ("motion",),
     ("inference",),
+    ("sea", "screening", "judgement"),
     (
         "study",
         "study_faults",
         "study_fixes",
         "study_lines",
         "study_schema",
+        "study_screening",
         "study_table",
+        "study_trials",
         "study_values",
     ),
-    ("model", "paths", "responses"),
+    ("model", "paths", "responses", "usable"),
     ("analysis",),
+    ("criticism",),
     ("results", "report"),
     ("outputs",),
 )
@@ -54,7 +58,9 @@ LIGHT = [
     "study_fixes",
     "study_lines",
     "study_schema",
+    "study_screening",
     "study_table",
+    "study_trials",
     "study_values",
 ]
 

@@ -10,6 +10,8 @@ from results_standins import make_fit, make_fixes, make_response, wandering_trac
 
 from trackfit.results import tables
 
+FLAGS = ["in_gap", "at_fix", "coast_adjusted"]
+
 
 def raw(path):
     with path.open(newline="") as stream:
@@ -28,6 +30,7 @@ def test_positions_have_fixed_decimals_and_times_in_utc(tmp_path):
     assert row["ellipse95_major_m"] == f"{track.table['ellipse95_major_m'].iloc[0]:.1f}"
     assert row["in_gap"] == "false"
     assert row["at_fix"] == "true"
+    assert row["coast_adjusted"] == "false"
 
 
 def test_positions_come_back_as_they_were(tmp_path):
@@ -40,12 +43,12 @@ def test_positions_come_back_as_they_were(tmp_path):
     back = tables.read_table(tmp_path / "p.csv")
     expected = tables.positions_table(tracks)
     pd.testing.assert_frame_equal(
-        back[["tag", "time", "in_gap", "at_fix"]],
-        expected[["tag", "time", "in_gap", "at_fix"]],
+        back[["tag", "time", *FLAGS]],
+        expected[["tag", "time", *FLAGS]],
         check_dtype=False,
     )
     assert back["time"].dtype == "datetime64[ns, UTC]"
-    for name in back.columns.drop(["tag", "time", "in_gap", "at_fix"]):
+    for name in back.columns.drop(["tag", "time", *FLAGS]):
         half_unit = {"lon": 5e-7, "lat": 5e-7}.get(name, 0.05 if name.endswith("_m") else 5e-4)
         np.testing.assert_allclose(back[name], expected[name], rtol=0, atol=half_unit * 1.0001)
 

@@ -88,13 +88,15 @@ def test_positions_are_read_by_netcdf4(path, tracks):
         )
         assert times[0] == pd.Timestamp("2024-03-01T06:00:00")
         assert data["time"].units == "seconds since 1970-01-01T00:00:00Z"
-        assert data["in_gap"][:].tolist() == table["in_gap"].astype(int).tolist()
+        for flag in ("in_gap", "at_fix", "coast_adjusted"):
+            assert data[flag][:].tolist() == table[flag].astype(int).tolist()
+            assert 0 < data[flag][:].sum() < len(table)
 
 
 def test_every_data_variable_says_what_it_is(path):
     with netCDF4.Dataset(path) as data:
         on_obs = [v for v in data.variables.values() if v.dimensions == ("obs",)]
-        assert len(on_obs) == 12
+        assert len(on_obs) == 13
         for variable in on_obs:
             assert variable.long_name
             assert hasattr(variable, "units") or hasattr(variable, "flag_meanings")

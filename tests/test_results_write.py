@@ -71,7 +71,9 @@ def test_results_are_read_back(tmp_path, study, name):
     assert back.positions["tag"].tolist() == expected["tag"].tolist()
     assert back.positions["time"].tolist() == expected["time"].tolist()
     assert back.positions["time"].dtype == "datetime64[ns, UTC]"
-    assert back.positions["in_gap"].tolist() == expected["in_gap"].tolist()
+    for flag in ("in_gap", "at_fix", "coast_adjusted"):
+        assert back.positions[flag].tolist() == expected[flag].tolist()
+        assert back.positions[flag].dtype == bool
     # six decimals of a degree in the CSV
     np.testing.assert_allclose(back.positions["lon"], expected["lon"], rtol=0, atol=5.001e-7)
     assert back.parameters["tag"].tolist() == ["seal 7"] * 2 + ["=7"] * 2 + ["lost"] * 2

@@ -18,15 +18,22 @@ if TYPE_CHECKING:
         Prepared,
         fill_tracks,
         fit_tags,
+        fix_judgements,
         parameter_table,
         preference_responses,
         prepare,
     )
+    from trackfit.criticism.compare import Compared, compare_models
+    from trackfit.criticism.criticism import Criticism, criticise_fits
+    from trackfit.criticism.hidden_fixes import HoldOutTrial, hold_out
+    from trackfit.criticism.judged import Judged, judge_fits
+    from trackfit.criticism.verdicts import Verdict, verdicts_of
     from trackfit.errors import CLASS_SD_M, ErrorRules
     from trackfit.faults import FixesError, LayerError, ResultsError, StudyError, TrackfitError
     from trackfit.fixes import Fixes, read_fixes
     from trackfit.frame import Plane
     from trackfit.inference.fit import Fit, FitStatus
+    from trackfit.judgement import FixJudgement
     from trackfit.layers import Coast, Layer
     from trackfit.outputs import write_results
     from trackfit.paths import FilledTrack
@@ -37,12 +44,17 @@ if TYPE_CHECKING:
 _WHERE = {
     "CLASS_SD_M": "errors",
     "Coast": "layers",
+    "Compared": "criticism.compare",
+    "Criticism": "criticism.criticism",
     "ErrorRules": "errors",
     "FilledTrack": "paths",
     "Fit": "inference.fit",
     "FitStatus": "inference.fit",
+    "FixJudgement": "judgement",
     "Fixes": "fixes",
     "FixesError": "faults",
+    "HoldOutTrial": "criticism.hidden_fixes",
+    "Judged": "criticism.judged",
     "Layer": "layers",
     "LayerError": "faults",
     "Plane": "frame",
@@ -53,8 +65,14 @@ _WHERE = {
     "Study": "study",
     "StudyError": "faults",
     "TrackfitError": "faults",
+    "Verdict": "criticism.verdicts",
+    "compare_models": "criticism.compare",
+    "criticise_fits": "criticism.criticism",
     "fill_tracks": "analysis",
     "fit_tags": "analysis",
+    "fix_judgements": "analysis",
+    "hold_out": "criticism.hidden_fixes",
+    "judge_fits": "criticism.judged",
     "parameter_table": "analysis",
     "preference_responses": "analysis",
     "prepare": "analysis",
@@ -64,18 +82,24 @@ _WHERE = {
     "to_geodataframe": "results",
     "to_pandas": "results",
     "to_xarray": "results",
+    "verdicts_of": "criticism.verdicts",
     "write_results": "outputs",
 }
 
 __all__ = [
     "CLASS_SD_M",
     "Coast",
+    "Compared",
+    "Criticism",
     "ErrorRules",
     "FilledTrack",
     "Fit",
     "FitStatus",
+    "FixJudgement",
     "Fixes",
     "FixesError",
+    "HoldOutTrial",
+    "Judged",
     "Layer",
     "LayerError",
     "Plane",
@@ -86,8 +110,14 @@ __all__ = [
     "Study",
     "StudyError",
     "TrackfitError",
+    "Verdict",
+    "compare_models",
+    "criticise_fits",
     "fill_tracks",
     "fit_tags",
+    "fix_judgements",
+    "hold_out",
+    "judge_fits",
     "parameter_table",
     "preference_responses",
     "prepare",
@@ -97,6 +127,7 @@ __all__ = [
     "to_geodataframe",
     "to_pandas",
     "to_xarray",
+    "verdicts_of",
     "write_results",
 ]
 

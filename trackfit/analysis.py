@@ -10,28 +10,23 @@ import numpy as np
 import pandas as pd
 from jaxtyping import Float
 
-from trackfit.errors import CLASS_SD_M, ErrorRules, fix_covariances, without_error
-from trackfit.faults import FixesError, LayerError, StudyError
-from trackfit.fixes import Fixes, read_fixes
+from trackfit.errors import ErrorRules, fix_covariances
+from trackfit.faults import LayerError
+from trackfit.fixes import Fixes
 from trackfit.frame import Plane
 from trackfit.inference.fit import Fit, fit_track
 from trackfit.inference.grid import time_grid
 from trackfit.inference.task import FitSettings, TrackData
-from trackfit.layers import Box, Coast, Layer, LayerRequest, read_coast, read_layer
+from trackfit.judgement import FixJudgement, judge_fixes
+from trackfit.layers import Coast, Layer, LayerRequest, read_coast, read_layer
 from trackfit.model import StudyModel, build_model
 from trackfit.paths import FilledTrack, fill_track, hours_since_1970, report_hours, times_utc
 from trackfit.responses import Response, responses_of
 from trackfit.study import Study
+from trackfit.usable import error_rules, study_area, usable_fixes
 
 DISTORTION_WARNING = 0.02
 """Distances and directions in the plane that are further off than this are worth a warning."""
-
-MARGIN_SHARE = 0.25
-MARGIN_KM = 50.0
-"""Layers are read to this far beyond the fixes: a share of their extent, and never less than so."""
-
-NO_ERROR = "nothing describes the error of this fix (no ellipse, sd or known class)"
-OTHER_TAG = "the study does not take this tag (study.tags)"
 
 TagProgress = Callable[[str, float, str], None]
 
@@ -102,17 +97,11 @@ def prepare(study: Study) -> Prepared:
     TrackfitError
         With the file, the line or key, the rule and the value.
     """
-    rules = ErrorRules(
-        ellipse_probability=study.errors.ellipse_probability,
-        class_sd_m={**CLASS_SD_M, **study.errors.classes},
-        default_sd_m=study.errors.default_sd_m,
-    )
-    fixes = _usable(study, rules)
-    table = fixes.table
-    lon, lat = table["lon"].to_numpy(), table["lat"].to_numpy()
+    fixes = usable_fixes(study)
+    lon, lat = fixes.table["lon"].to_numpy(), fixes.table["lat"].to_numpy()
     plane = Plane.from_crs(study.plane.crs) if study.plane.crs else Plane.centred_on(lon, lat)
-    tracks = _tracks(fixes, plane, rules)
-    box = _study_area(np.concatenate([t.at_km for t in tracks.values()]))
+    tracks = _tracks(fixes, plane, error_rules(study))
+    box = study_area(np.concatenate([t.at_km for t in tracks.values()]))
     hours = np.concatenate([t.hours for t in tracks.values()])
     layers = {
         name: read_layer(
@@ -123,10 +112,13 @@ def prepare(study: Study) -> Prepared:
         )
         for name, settings in study.layers.items()
     }
-    used = _used_layers(study, layers)
-    for track in tracks.values():
-        for layer in used.values():
-            _check_fixes_covered(track, layer, plane)
+    used = used_layers(study, layers)
+    far_off = [
+        note
+        for track in tracks.values()
+        for layer in used.values()
+        for note in _check_fixes_covered(track, layer, plane, heavy=study.errors.tails == "heavy")
+    ]
     return Prepared(
         study=study,
         fixes=fixes,
@@ -135,32 +127,9 @@ def prepare(study: Study) -> Prepared:
         layers=layers,
         coast=read_coast(study.coast.file, plane, box) if study.coast else None,
         model=build_model(study, used, plane),
-        notes=(*fixes.notes, *_layer_notes(study, layers)),
+        notes=(*fixes.notes, *_layer_notes(study, layers), *far_off),
         warnings=_distortion_warning(plane, lon, lat),
     )
-
-
-def _usable(study: Study, rules: ErrorRules) -> Fixes:
-    fixes = read_fixes(
-        study.fixes.files,
-        study.fixes.columns.mapping(),
-        delimiter=study.fixes.delimiter,
-        decimal=study.fixes.decimal,
-        time_zone=study.fixes.time_zone,
-    )
-    if study.study.tags:
-        absent = [tag for tag in study.study.tags if tag not in fixes.tags]
-        if absent:
-            raise StudyError(
-                f"{study.path}: study.tags: no usable fix has the tag {absent[0]!r}; "
-                f"the fixes hold {', '.join(fixes.tags)}"
-            )
-        fixes = fixes.setting_aside(~fixes.table["tag"].isin(study.study.tags), OTHER_TAG)
-    fixes = fixes.setting_aside(without_error(fixes.table, rules), NO_ERROR)
-    if fixes.table.empty:
-        counts = "; ".join(f"{count} x {reason}" for reason, count in fixes.reason_counts().items())
-        raise FixesError(f"{study.path}: no fix is left to use ({counts})")
-    return fixes
 
 
 def _tracks(fixes: Fixes, plane: Plane, rules: ErrorRules) -> dict[str, TrackData]:
@@ -176,20 +145,15 @@ def _tracks(fixes: Fixes, plane: Plane, rules: ErrorRules) -> dict[str, TrackDat
     return tracks
 
 
-def _study_area(at_km: Float[np.ndarray, "n 2"]) -> Box:
-    low, high = at_km.min(axis=0), at_km.max(axis=0)
-    margin = max(MARGIN_KM, MARGIN_SHARE * float((high - low).max()))
-    return Box(*(low - margin), *(high + margin))
-
-
-def _used_layers(study: Study, layers: Mapping[str, Layer]) -> dict[str, Layer]:
+def used_layers(study: Study, layers: Mapping[str, Layer]) -> dict[str, Layer]:
+    """The layers that serve a term of the study."""
     names = {p.layer for p in study.preference if p.layer}
     names |= {study.current.layer} if study.current else set()
     return {name: layer for name, layer in layers.items() if name in names}
 
 
 def _layer_notes(study: Study, layers: Mapping[str, Layer]) -> list[str]:
-    used = _used_layers(study, layers)
+    used = used_layers(study, layers)
     notes = [
         f"layer '{name}' is read but serves no term of the study" for name in layers.keys() - used
     ]
@@ -212,7 +176,12 @@ def _distortion_warning(plane: Plane, lon: np.ndarray, lat: np.ndarray) -> tuple
     )
 
 
-def _check_fixes_covered(track: TrackData, layer: Layer, plane: Plane) -> None:
+def _check_fixes_covered(track: TrackData, layer: Layer, plane: Plane, *, heavy: bool) -> list[str]:
+    """Refuse fixes that a layer does not cover; with heavy tails note those outside its area.
+
+    Heavy tails are there for fixes the animal was nowhere near. Whether the layer covers the path
+    itself is seen when it is fitted.
+    """
     outside_time = ~layer.covers_time(track.hours)
     if outside_time.any():
         first, last = times_utc(layer.hours[[0, -1]])
@@ -221,7 +190,16 @@ def _check_fixes_covered(track: TrackData, layer: Layer, plane: Plane) -> None:
             f"time of layer '{layer.name}' ({first:%Y-%m-%d %H:%M} to {last:%Y-%m-%d %H:%M} UTC, "
             f"{layer.source}); use a layer that covers the track, or leave the layer out"
         )
-    _check_inside(track.tag, "fix", track.hours, track.at_km, layer, plane)
+    if not heavy:
+        _check_inside(track.tag, "fix", track.hours, track.at_km, layer, plane)
+    outside = int((~layer.covers(track.at_km)).sum())
+    if not outside:
+        return []
+    return [
+        f"tag {track.tag}: outside the area of layer '{layer.name}' lie {outside} of "
+        f"{len(track.hours)} fixes; they are used, for the tails are heavy and the path need not "
+        "go there"
+    ]
 
 
 def _check_inside(
@@ -261,32 +239,40 @@ def fit_tags(prepared: Prepared, progress: TagProgress = _silent) -> list[Fit]:
     return [_fit_tag(prepared, tag, progress) for tag in prepared.fixes.tags]
 
 
-def _fit_tag(prepared: Prepared, tag: str, progress: TagProgress) -> Fit:
-    study, data = prepared.study, prepared.tracks[tag]
-    settings = FitSettings(
+def fit_settings(study: Study) -> FitSettings:
+    """How a study wants its tracks fitted."""
+    return FitSettings(
         step_hours=study.motion.step_hours,
         coarse_factor=study.fit.coarse_factor,
         max_iterations=study.fit.max_iterations,
         step_check=study.fit.step_check,
         points=study.fit.points,
     )
+
+
+def _fit_tag(prepared: Prepared, tag: str, progress: TagProgress) -> Fit:
+    study, data = prepared.study, prepared.tracks[tag]
     fit = fit_track(
         data,
         prepared.model.for_track(data),
-        settings,
+        fit_settings(study),
         prepared.report_hours(tag),
         lambda done, message: progress(tag, done, message),
     )
     if fit.states is not None:
         hours, at_km = fit.states.problem.hours, fit.states.mean[:, :2]
-        for layer in _used_layers(study, prepared.layers).values():
+        for layer in used_layers(study, prepared.layers).values():
             _check_inside(tag, "fitted path", hours, at_km, layer, prepared.plane)
     return fit
 
 
 def fill_tracks(prepared: Prepared, fits: Sequence[Fit]) -> list[FilledTrack]:
-    """Positions with credible ellipses of every tag that was fitted."""
+    """Positions with credible ellipses of every tag that was fitted.
+
+    Where the study has a coast and does not say otherwise, they keep to the sea.
+    """
     paths = prepared.study.paths
+    at_sea = paths.keep_at_sea is not False
     return [
         fill_track(
             fit,
@@ -296,6 +282,7 @@ def fill_tracks(prepared: Prepared, fits: Sequence[Fit]) -> list[FilledTrack]:
             gap_hours=paths.gap_hours,
             draws=paths.draws,
             seed=prepared.study.study.seed,
+            coast=prepared.coast if at_sea else None,
         )
         for fit in fits
         if fit.states is not None
@@ -305,6 +292,15 @@ def fill_tracks(prepared: Prepared, fits: Sequence[Fit]) -> list[FilledTrack]:
 def preference_responses(prepared: Prepared, fits: Sequence[Fit]) -> list[Response]:
     """The response of every fitted tag to every preference term."""
     return [r for fit in fits for r in responses_of(fit, prepared.model.names)]
+
+
+def fix_judgements(prepared: Prepared, fits: Sequence[Fit]) -> list[FixJudgement]:
+    """Every used fix against its prediction from the other fixes of its tag, by tag."""
+    flag_p_value = prepared.study.screening.flag_p_value
+    return [
+        judge_fixes(fit, prepared.fixes.of(fit.tag), prepared.plane, flag_p_value=flag_p_value)
+        for fit in fits
+    ]
 
 
 def parameter_table(fits: Sequence[Fit]) -> pd.DataFrame:

@@ -13,7 +13,7 @@ import pandas as pd
 from jaxtyping import Bool, Float
 
 from trackfit.faults import FixesError, StudyError
-from trackfit.frame import Plane, covariance_from_ellipse
+from trackfit.frame import Plane, covariance_from_ellipse, ellipse_scale
 
 CLASS_SD_M: dict[str, float] = {
     "G": 100.0,
@@ -120,6 +120,31 @@ def without_error(table: pd.DataFrame, rules: ErrorRules) -> Bool[np.ndarray, " 
     A class that is not in `rules.class_sd_m` (class Z, for one) describes nothing.
     """
     return ~_has_ellipse(table) & np.isnan(_sd_m(table, rules))
+
+
+def fix_sd_m(table: pd.DataFrame, rules: ErrorRules) -> Float[np.ndarray, " n"]:
+    """Root mean square of the errors' standard deviations on two axes, metres, (n,).
+
+    Of an ellipse sqrt((major^2 + minor^2) / 2) / k with k = `ellipse_scale(probability)`. NaN
+    where nothing describes the error.
+    """
+    major, minor = _numbers(table, "ellipse_major_m"), _numbers(table, "ellipse_minor_m")
+    of_ellipse = np.hypot(major, minor) / np.sqrt(2.0) / ellipse_scale(rules.ellipse_probability)
+    return np.where(_has_ellipse(table), of_ellipse, _sd_m(table, rules))
+
+
+def error_kinds(table: pd.DataFrame, rules: ErrorRules) -> list[str]:
+    """What describes the error of each fix: "ellipse", "GPS", "class B" and so on, or "default".
+
+    Precedence as in `fix_covariances`.
+    """
+    stated = table["error_class"].isin(list(rules.class_sd_m)).to_numpy(dtype=bool)
+    gps = ~np.isnan(_numbers(table, "gps_sd_m"))
+    rows = zip(_has_ellipse(table), gps, stated, table["error_class"], strict=True)
+    return [
+        "ellipse" if ellipse else "GPS" if near else f"class {name}" if known else "default"
+        for ellipse, near, known, name in rows
+    ]
 
 
 def _has_ellipse(table: pd.DataFrame) -> np.ndarray:

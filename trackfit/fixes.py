@@ -70,7 +70,9 @@ class Fixes:
             raise FixesError(f"tag {tag!r} has no usable fix{nearest(tag, self.tags)}")
         return self.table[self.table["tag"] == tag].reset_index(drop=True)
 
-    def setting_aside(self, mask: Collection[Any], reason: str) -> "Fixes":
+    def setting_aside(
+        self, mask: Collection[Any], reason: str, shown: Collection[str] | None = None
+    ) -> "Fixes":
         """Move rows of `table` to `set_aside`.
 
         The cells are written anew here (ISO 8601 in UTC, shortest decimals): the text as read is
@@ -80,16 +82,23 @@ class Fixes:
         ----------
         mask
             True where the row moves, (len(table),).
+        reason
+            The rule; no colon in it.
+        shown
+            What breaks the rule, to follow it after a colon, (len(table),).
         """
         moves = np.asarray(mask, dtype=bool)
         if moves.shape != (len(self.table),):
             raise ValueError(f"mask has shape {moves.shape}, not ({len(self.table)},)")
         moved = self.table[moves]
+        figures = [""] * len(moved)
+        if shown is not None:
+            figures = [f": {text}" for text in np.asarray(shown, dtype=object)[moves]]
         cells = moved[["file", "line", "tag"]].assign(
             time=[time.isoformat().replace("+00:00", "Z") for time in moved["time"]],
             lon=[repr(float(value)) for value in moved["lon"]],
             lat=[repr(float(value)) for value in moved["lat"]],
-            reason=reason,
+            reason=[reason + figure for figure in figures],
         )
         aside = (
             pd.concat([self.set_aside, cells], ignore_index=True) if len(cells) else self.set_aside

@@ -3,13 +3,24 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import partial
 from pathlib import Path
 
-from trackfit.analysis import Prepared, preference_responses
+from trackfit.analysis import Prepared, fix_judgements, preference_responses
+from trackfit.criticism.judged import Judged, judge_fits
+from trackfit.criticism.tables import comparison_table, hold_out_table, judged_tables
 from trackfit.inference.fit import Fit
+from trackfit.judgement import FixJudgement
 from trackfit.paths import FilledTrack
-from trackfit.report import Scene, figure_writers
-from trackfit.results import RecordInfo, write_folder
+from trackfit.report import Scene, figure_writers, file_stem, residual_figure, save_figure
+from trackfit.results import (
+    JUDGEMENT_FILE,
+    RecordInfo,
+    write_folder,
+    write_judgements,
+    write_table,
+)
+from trackfit.results.write import FileWriter
 
 
 def write_results(
@@ -18,12 +29,20 @@ def write_results(
     fits: Sequence[Fit],
     tracks: Sequence[FilledTrack],
     *,
+    judged: Judged | None = None,
     overwrite: bool = False,
 ) -> Path:
     """Write the results of a study to a folder, all at once, and return the folder.
 
-    Always `parameters.csv`, `set_aside.csv`, `responses.csv` and `results.json`. With filled
-    tracks also the positions in the formats of `[output]` and the figures.
+    Always `parameters.csv`, `set_aside.csv`, `fix_judgement.csv`, `responses.csv` and
+    `results.json`, `verdicts.csv` and the tables of the folder `fit`. With filled tracks also the
+    positions in the formats of `[output]` and the figures. Where the study asks for them,
+    `comparison.csv`, `hold_out.csv` and `hold_out_fixes.csv`.
+
+    Parameters
+    ----------
+    judged
+        What was found out about the fits (`judge_fits`); found out now if it is not given.
 
     Raises
     ------
@@ -32,27 +51,69 @@ def write_results(
     """
     output = prepared.study.output
     responses = preference_responses(prepared, fits)
-    figures = {}
+    judgements = fix_judgements(prepared, fits)
+    judged = judge_fits(prepared, fits) if judged is None else judged
+    figures: dict[str, FileWriter] = {}
     if output.figures and tracks:
         figures = figure_writers(
             tracks,
             prepared.fixes,
             responses,
             _scene(prepared),
+            judgements=judgements,
             on_path={(r.tag, r.term): r.on_path for r in responses},
             figure_format=output.figure_format,
         )
+        figures |= _residual_figures(judged, output.figure_format)
     return write_folder(
         Path(folder),
         tracks=tracks,
         fits=fits,
         responses=responses,
         fixes=prepared.fixes,
-        record=_record(prepared),
+        record=_record(prepared, judged, tracks),
         formats=output.formats if tracks else (),
-        extra_files=figures,
+        extra_files={
+            JUDGEMENT_FILE: partial(_write_judgements, judgements),
+            **_judged_files(judged),
+            **figures,
+        },
         overwrite=overwrite,
     )
+
+
+def _write_judgements(judgements: Sequence[FixJudgement], path: Path) -> None:
+    write_judgements(path, judgements)
+
+
+def _judged_files(judged: Judged) -> dict[str, FileWriter]:
+    tables = judged_tables(judged.criticisms, judged.verdicts)
+    if judged.comparison:
+        tables["comparison.csv"] = comparison_table(judged.comparison)
+    if judged.trial is not None:
+        tables["hold_out.csv"] = hold_out_table(judged.trial)
+        tables["hold_out_fixes.csv"] = judged.trial.fixes
+    return {name: partial(write_table, table=table) for name, table in tables.items()}
+
+
+def _residual_figures(judged: Judged, figure_format: str) -> dict[str, FileWriter]:
+    figures: dict[str, FileWriter] = {}
+    for criticism in judged.criticisms:
+        residuals = criticism.residuals
+        if residuals is None:
+            continue
+        draw = partial(
+            residual_figure,
+            criticism.tag,
+            residuals.hours,
+            residuals.left_out.residual,
+            residuals.quantiles,
+            residuals.of_ahead,
+            residuals.of_left_out,
+        )
+        name = f"figures/residuals_{file_stem(criticism.tag)}.{figure_format}"
+        figures[name] = partial(save_figure, draw)
+    return figures
 
 
 def _scene(prepared: Prepared) -> Scene:
@@ -69,7 +130,7 @@ def _scene(prepared: Prepared) -> Scene:
     )
 
 
-def _record(prepared: Prepared) -> RecordInfo:
+def _record(prepared: Prepared, judged: Judged, tracks: Sequence[FilledTrack]) -> RecordInfo:
     study = prepared.study
     standards = {
         name: {"centre": s.centre, "scale": s.scale, "unit": prepared.layers[name].unit}
@@ -80,6 +141,7 @@ def _record(prepared: Prepared) -> RecordInfo:
         inputs=prepared.input_files(),
         seed=study.study.seed,
         notes=prepared.notes,
-        warnings=prepared.warnings,
+        warnings=(*prepared.warnings, *(w for track in tracks for w in track.warnings)),
+        findings=judged.for_record(),
         title=study.study.name,
     )

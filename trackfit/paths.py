@@ -7,12 +7,16 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
+import shapely
 from jaxtyping import Float
 
 from trackfit.frame import Ellipses, Plane, ellipse_from_covariance, ellipse_scale
 from trackfit.inference.fit import Fit
 from trackfit.inference.grid import nearest_state
+from trackfit.layers.layer import Coast
+from trackfit.sea.at_sea import Kept, Trouble, keep_at_sea
 
+NO_COAST = Coast(shapely.MultiPolygon(), "none")
 HOUR_NS = 3_600_000_000_000
 
 
@@ -26,14 +30,22 @@ class FilledTrack:
         One row a time: time (UTC), lon, lat (degrees, WGS 84), sd_m (root mean square of the two
         axes' standard deviations), ellipse_bearing_deg (of the major axis, clockwise from true
         north), ellipse50_major_m, ellipse50_minor_m, ellipse95_major_m, ellipse95_minor_m (half
-        axes), hours_to_fix (to the nearest used fix), in_gap, at_fix.
+        axes), hours_to_fix (to the nearest used fix), in_gap, at_fix, coast_adjusted (the coast
+        moved the position or its ellipses).
     draws_lonlat
         Paths drawn from the joint posterior, parameter uncertainty included, degrees.
+    draw_times
+        Times of the drawn paths: those of the table, and more where straight lines between those
+        would cross land.
+    warnings
+        Sentences on where fixes and coast do not go together.
     """
 
     tag: str
     table: pd.DataFrame
     draws_lonlat: Float[np.ndarray, "draws times 2"]
+    draw_times: pd.DatetimeIndex
+    warnings: tuple[str, ...] = ()
 
 
 def hours_since_1970(times: pd.Series | pd.DatetimeIndex) -> Float[np.ndarray, " n"]:
@@ -67,11 +79,13 @@ def fill_track(
     gap_hours: float,
     draws: int,
     seed: int,
+    coast: Coast | None = None,
 ) -> FilledTrack:
     """Positions with credible ellipses at every report time and fix of a fitted track.
 
     Ellipses hold parameter uncertainty. Draws depend on the seed and the tag's name only, so that
-    other tags of a study do not change them.
+    other tags of a study do not change them. With a coast, positions, ellipses and draws are those
+    of paths that keep to the sea (`trackfit.sea.at_sea`).
 
     Raises
     ------
@@ -83,13 +97,14 @@ def fill_track(
     grid = fit.states.problem.hours
     wanted = np.concatenate([report_hours(grid[0], grid[-1], interval_hours), fix_hours])
     at = np.unique(nearest_state(grid, wanted))
-    xy_km = fit.states.positions_km()[at]
-    covariance = fit.states.position_covariance_km2()[at]
-    lon, lat = plane.to_lonlat(xy_km)
+    key = [seed, zlib.crc32(fit.tag.encode())]
+    drawn = fit.states.drawn(draws, np.random.default_rng(key)) if draws else []
+    kept = keep_at_sea(fit.states, coast or NO_COAST, drawn, key)
+    lon, lat = plane.to_lonlat(kept.xy_km[at])
     to_ground = np.linalg.inv(plane.ground_to_plane(lon, lat))
-    ground_m2 = 1e6 * to_ground @ covariance @ np.swapaxes(to_ground, 1, 2)
-    half = _region(fit, at, ground_m2, 0.50)
-    most = _region(fit, at, ground_m2, 0.95)
+    ground_m2 = 1e6 * to_ground @ kept.covariance_km2[at] @ np.swapaxes(to_ground, 1, 2)
+    half = _region(kept, at, ground_m2, 0.50)
+    most = _region(kept, at, ground_m2, 0.95)
     from_fix, width = _around(grid[at], fix_hours)
     table = pd.DataFrame(
         {
@@ -105,18 +120,25 @@ def fill_track(
             "hours_to_fix": from_fix,
             "in_gap": (width > gap_hours) & (from_fix > 0.0),
             "at_fix": np.isin(at, nearest_state(grid, fix_hours)),
+            "coast_adjusted": kept.adjusted[at],
         }
     )
-    return FilledTrack(fit.tag, table, _draws(fit, plane, at, draws, seed))
+    vertices = np.union1d(at, _around_land(kept, at, plane))
+    return FilledTrack(
+        tag=fit.tag,
+        table=table,
+        draws_lonlat=_lonlat(plane, kept.draws_km[:, vertices]),
+        draw_times=times_utc(grid[vertices]),
+        warnings=tuple(_warning(fit.tag, trouble, grid) for trouble in kept.troubles),
+    )
 
 
 def _region(
-    fit: Fit, at: np.ndarray, ground_m2: Float[np.ndarray, "n 2 2"], probability: float
+    kept: Kept, at: np.ndarray, ground_m2: Float[np.ndarray, "n 2 2"], probability: float
 ) -> Ellipses:
     """Ellipses that hold a probability, by the size that the posterior has at each state."""
-    assert fit.states is not None
     plain = ellipse_from_covariance(ground_m2, probability)
-    wider = np.sqrt(fit.states.squared_radius(probability)[at]) / ellipse_scale(probability)
+    wider = np.sqrt(kept.squared_radius[probability][at]) / ellipse_scale(probability)
     return Ellipses(plain.major_m * wider, plain.minor_m * wider, plain.bearing_deg)
 
 
@@ -133,13 +155,38 @@ def _around(
     return distance, fixes[after] - fixes[before]
 
 
-def _draws(
-    fit: Fit, plane: Plane, at: np.ndarray, draws: int, seed: int
+def _lonlat(
+    plane: Plane, xy_km: Float[np.ndarray, "draws times 2"]
 ) -> Float[np.ndarray, "draws times 2"]:
-    assert fit.states is not None
-    if draws == 0:
-        return np.zeros((0, len(at), 2))
-    rng = np.random.default_rng([seed, zlib.crc32(fit.tag.encode())])
-    xy_km = fit.states.draw(draws, rng)[:, at, :2]
     lon, lat = plane.to_lonlat(xy_km.reshape(-1, 2))
-    return np.stack([lon, lat], axis=1).reshape(draws, len(at), 2)
+    return np.stack([lon, lat], axis=1).reshape(xy_km.shape)
+
+
+def _around_land(kept: Kept, at: np.ndarray, plane: Plane) -> np.ndarray:
+    """States between the reported ones without which a straight line in degrees meets land."""
+    long = np.flatnonzero(np.diff(at) > 1)
+    if not len(kept.draws_km) or kept.land.is_empty or not len(long):
+        return np.zeros(0, int)
+    start, end = kept.draws_km[:, at[long]], kept.draws_km[:, at[long + 1]]
+    first, last = _lonlat(plane, start), _lonlat(plane, end)
+    turn = np.rint((first[..., 0] - last[..., 0]) / 360.0) * 360.0
+    middle = (first + last + np.stack([turn, np.zeros_like(turn)], axis=-1)) / 2.0
+    middle = plane.to_plane(*middle.reshape(-1, 2).T).reshape(start.shape)
+    lines = shapely.linestrings(np.stack([start, middle, end], axis=2))
+    met = long[shapely.intersects(kept.land, lines).any(axis=0)]
+    return np.concatenate([np.zeros(0, int), *(np.arange(at[k] + 1, at[k + 1]) for k in met)])
+
+
+def _warning(tag: str, trouble: Trouble, grid: Float[np.ndarray, " states"]) -> str:
+    first, last = times_utc(grid[[trouble.first, trouble.last]])
+    when = f"tag {tag}: between {first:%Y-%m-%d %H:%M} and {last:%Y-%m-%d %H:%M} UTC"
+    if trouble.crosses:
+        return (
+            f"{when} no way by sea was found for every path, and what was found none for crosses "
+            "land; check the coast there, or set paths.keep_at_sea = false if this animal walks "
+            "or flies"
+        )
+    return (
+        f"{when} the fixes put the animal ashore and the coast keeps it at sea; the positions are "
+        "the coast's. Check the errors of those fixes and the coast there"
+    )

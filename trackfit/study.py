@@ -30,7 +30,9 @@ from trackfit.study_schema import (
     PlaneSettings,
     Preference,
 )
+from trackfit.study_screening import Screening
 from trackfit.study_table import Table
+from trackfit.study_trials import Compare, HoldOut
 from trackfit.study_values import nearest, setting
 
 RESERVED_NAMES = ("current", "diffusion", "drift", "error_scale")
@@ -47,6 +49,7 @@ class Study(Table):
 
     study: About = setting(..., "What the study is called and which tags it takes.")
     fixes: FixesFiles = setting(..., "Where the fixes are, and how the tables are written.")
+    screening: Screening = setting(Screening, "Fixes to set aside or to flag.")
     plane: PlaneSettings = setting(PlaneSettings, "The flat map to work on.")
     layers: dict[str, LayerSettings] = setting(dict, "Gridded variables over the sea.")
     coast: CoastFile | None = setting(None, "Land.")
@@ -58,6 +61,8 @@ class Study(Table):
     errors: Errors = setting(Errors, "How far off a fix may be.")
     fit: Fit = setting(Fit, "How the parameters are found.")
     paths: Paths = setting(Paths, "The positions to write out.")
+    compare: Compare | None = setting(None, "Other models to fit beside it.")
+    hold_out: HoldOut | None = setting(None, "Fixes to hide and to foretell.")
     output: Output = setting(..., "Where the results go.")
 
     _path: Path = PrivateAttr()
@@ -92,7 +97,7 @@ class Study(Table):
 
         Paths are written as the study file has them.
         """
-        return self.model_dump(mode="json", context={"folder": self.folder})
+        return self.model_dump(mode="json", by_alias=True, context={"folder": self.folder})
 
 
 def read_study(path: str | Path) -> Study:
@@ -181,6 +186,8 @@ class _Parts:
     motion: Motion | None
     paths: Paths | None
     fixes: FixesFiles | None
+    errors: Errors | None
+    screening: Screening | None
     output: Output | None
 
     @classmethod
@@ -201,6 +208,8 @@ class _Parts:
             motion=sound(Motion, raw.get("motion", {})),
             paths=sound(Paths, raw.get("paths", {})),
             fixes=sound(FixesFiles, raw.get("fixes")),
+            errors=sound(Errors, raw.get("errors", {})),
+            screening=sound(Screening, raw.get("screening", {})),
             output=sound(Output, raw.get("output", {})),
         )
 
@@ -220,6 +229,8 @@ def _faults_between_tables(parts: _Parts, raw: Mapping[str, Any]) -> list[Fault]
             *_layers_in_use(parts, raw),
             *_terms_told_apart(parts, known),
             *_times(parts),
+            *_keeping_at_sea(parts, raw),
+            *_screening(parts, raw),
             *_inputs_outside_output(parts),
         )
     ]
@@ -323,6 +334,22 @@ def _times(parts: _Parts) -> _Broken:
     if parts.paths.gap_hours < interval_hours:
         rule = f"must not be shorter than paths.interval_hours ({interval_hours:g})"
         yield ("paths", "gap_hours"), rule, ""
+
+
+def _keeping_at_sea(parts: _Parts, raw: Mapping[str, Any]) -> _Broken:
+    if parts.paths is not None and parts.paths.keep_at_sea and "coast" not in raw:
+        yield ("paths", "keep_at_sea"), "needs [coast], which tells land from sea", ""
+
+
+def _screening(parts: _Parts, raw: Mapping[str, Any]) -> _Broken:
+    if parts.screening is None:
+        return
+    if parts.screening.land_margin_m is not None and "coast" not in raw:
+        yield ("screening", "land_margin_m"), "needs [coast], which tells land from sea", ""
+    for name in parts.errors.classes if parts.errors else ():
+        if name in parts.screening.invalid_classes:
+            rule = "screening.invalid_classes sets this class aside; take it out of that list first"
+            yield ("errors", "classes", name), rule, ""
 
 
 def _inputs_outside_output(parts: _Parts) -> _Broken:

@@ -7,6 +7,7 @@ from types import NoneType
 from typing import Annotated, Any, get_args, get_origin
 
 from pydantic import BaseModel, ValidationError
+from pydantic.fields import FieldInfo
 from pydantic_core import ErrorDetails
 
 from trackfit.study_lines import KeyPath, line_of
@@ -119,10 +120,10 @@ def _hint(
 def near_key(word: str, path: KeyPath, root: type[Table]) -> str:
     """Return the key of the table at ``path`` most like ``word``, or where else that key lives."""
     model = model_at(root, path)
-    near = nearest(word, model.model_fields) if model else ""
+    near = nearest(word, keys_of(model)) if model else ""
     if near:
         return near
-    homes = [header for header, table in tables(root) if word in table.model_fields]
+    homes = [header for header, table in tables(root) if word in keys_of(table)]
     return f"{word} in {homes[0]}" if homes else ""
 
 
@@ -149,12 +150,17 @@ def _is_table(kind: Any) -> bool:
     return isinstance(kind, type) and issubclass(kind, BaseModel)
 
 
+def keys_of(table: type[BaseModel]) -> dict[str, FieldInfo]:
+    """Return the keys of a table as the file writes them."""
+    return {field.alias or name: field for name, field in table.model_fields.items()}
+
+
 def model_at(root: type[BaseModel], path: KeyPath) -> type[BaseModel] | None:
     """Return the schema of the table at a path, or None where the schema has no table."""
     if not path:
         return root
     first, *rest = path
-    field = root.model_fields.get(str(first))
+    field = keys_of(root).get(str(first))
     if field is None:
         return None
     kind, header = _inner(field.annotation)
@@ -165,7 +171,7 @@ def model_at(root: type[BaseModel], path: KeyPath) -> type[BaseModel] | None:
 
 def tables(root: type[BaseModel], above: str = "") -> Iterator[tuple[str, type[BaseModel]]]:
     """Yield each table of the schema with its header, such as ``[layers.NAME]``, in order."""
-    for name, field in root.model_fields.items():
+    for name, field in keys_of(root).items():
         kind, brackets = _inner(field.annotation)
         if _is_table(kind):
             header = brackets.format(f"{above}{name}")

@@ -315,6 +315,12 @@ class Paths(Table):
         gt=0,
     )
     draws: int = setting(20, "Number of possible paths to draw for each tag.", ge=0, le=10_000)
+    keep_at_sea: bool | None = setting(
+        None,
+        "Keep positions and drawn paths off the land of `[coast]`: no position stands on it, no "
+        "drawn path crosses it. `false` for animals that fly or haul out.",
+        shown="true where there is a `[coast]`",
+    )
 
 
 class Output(Table):

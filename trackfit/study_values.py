@@ -7,6 +7,7 @@ import difflib
 import math
 import os
 from collections.abc import Iterable
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import Annotated, Any, Literal, NoReturn
 
@@ -153,6 +154,19 @@ def _time_zone(value: str) -> str:
     return value
 
 
+def _moment(value: Any) -> datetime:
+    rule = "must be a date and time with its zone, such as 2024-05-01T06:00:00Z"
+    if isinstance(value, str):
+        try:
+            value = datetime.fromisoformat(value)
+        except ValueError:
+            refuse(rule)
+    # A date is not a moment, and TOML's times without a zone are anyone's.
+    if not isinstance(value, datetime) or value.tzinfo is None:
+        refuse(rule)
+    return value.astimezone(UTC)
+
+
 def unit_dimensions(unit: str) -> Any:
     """Return what a unit measures; raises where the units library cannot tell."""
     from trackfit.layers.units import registry
@@ -206,6 +220,9 @@ Folder = Annotated[
     Path, PlainValidator(_output_folder), PlainSerializer(_as_written, when_used="json")
 ]
 Unit = Annotated[Text, AfterValidator(_unit)]
+Moment = Annotated[
+    datetime, PlainValidator(_moment), PlainSerializer(datetime.isoformat, when_used="json")
+]
 TimeZone = Annotated[Text, AfterValidator(_time_zone)]
 ProjectedCrs = Annotated[Text, AfterValidator(_projected_crs)]
 _Estimable = Annotated[float | Literal["estimated"], PlainValidator(_estimated_or_number)]

@@ -44,6 +44,16 @@ class Cholesky(NamedTuple):
         _check(info)
         return solution.reshape(right.shape)
 
+    def multiply_factor(
+        self, right: Float[np.ndarray, "size columns"]
+    ) -> Float[np.ndarray, "size columns"]:
+        """L times right: turns white noise into draws with covariance L L'."""
+        product = np.zeros_like(right)
+        size = len(right)
+        for below, diagonal in enumerate(self.storage[:size]):
+            product[below:] += diagonal[: size - below, None] * right[: size - below]
+        return product
+
 
 def factor(band: Float[np.ndarray, "n dim 2*dim"]) -> Cholesky:
     """Cholesky factor of a block tridiagonal matrix.

@@ -89,7 +89,8 @@ def error_mixture(
 ) -> tuple[Float[np.ndarray, " nodes"], Float[np.ndarray, " nodes"]]:
     """Weights w at which errors are N(0, s^2 C / w), and the logarithms of their masses.
 
-    Quadrature nodes in log w of w ~ Gamma(nu/2, nu/2); one weight of one for normal errors.
+    Quadrature nodes in log w of w ~ Gamma(nu/2, nu/2); one weight of one for normal errors. Large
+    nu make log w narrow, and the nodes are drawn together as its standard deviation falls.
     """
     if log_nu is None:
         return np.ones(1), np.zeros(1)

@@ -213,11 +213,23 @@ class Coast:
     def distance_km(self, xy_km: Float[np.ndarray, "n 2"]) -> Float[np.ndarray, " n"]:
         """Return the plane distance to the nearest land: 0 on land, inf where there is none."""
         xy = np.asarray(xy_km, float)
-        distance = np.full(len(xy), np.inf)
-        if self.land.is_empty or not len(xy):
+        return np.where(self.contains(xy), 0.0, self._outline_km(xy))
+
+    def inland_km(self, xy_km: Float[np.ndarray, "n 2"]) -> Float[np.ndarray, " n"]:
+        """Return how far inside land each point lies (plane distance to its edge); 0 at sea.
+
+        The edge of the box counts as an edge of land: further inland than the box reaches, the
+        distance is a lower bound.
+        """
+        xy = np.asarray(xy_km, float)
+        return np.where(self.contains(xy), self._outline_km(xy), 0.0)
+
+    def _outline_km(self, xy_km: Float[np.ndarray, "n 2"]) -> Float[np.ndarray, " n"]:
+        distance = np.full(len(xy_km), np.inf)
+        if self.land.is_empty or not len(xy_km):
             return distance
         index, found = self._shore.query_nearest(
-            shapely.points(xy), return_distance=True, all_matches=False
+            shapely.points(xy_km), return_distance=True, all_matches=False
         )
         distance[index[0]] = found
-        return np.where(self.contains(xy), 0.0, distance)
+        return distance

@@ -1,6 +1,8 @@
 """Figures of a study: one page a tag, and what the tags prefer."""
 
 from trackfit.report.figures import figure_writers, file_stem
+from trackfit.report.judgement_figure import judgement_figure
+from trackfit.report.residual_figure import residual_figure
 from trackfit.report.response_figure import PathValues, response_figure, response_pages
 from trackfit.report.scene import FixPoints, Scene
 from trackfit.report.style import CAUTION, FIGURE_FORMATS, house_style, save_figure
@@ -15,6 +17,8 @@ __all__ = [
     "figure_writers",
     "file_stem",
     "house_style",
+    "judgement_figure",
+    "residual_figure",
     "response_figure",
     "response_pages",
     "save_figure",

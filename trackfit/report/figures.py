@@ -7,11 +7,12 @@ from functools import partial
 from pathlib import Path
 
 from trackfit.faults import ResultsError
+from trackfit.report.judgement_figure import judgement_figure
 from trackfit.report.response_figure import PathValues, response_figure, response_pages
 from trackfit.report.scene import Scene
 from trackfit.report.style import FIGURE_FORMATS, save_figure
 from trackfit.report.track_figure import track_figure
-from trackfit.results.inputs import FixesLike, ResponseLike, TrackLike
+from trackfit.results.inputs import FixesLike, JudgementLike, ResponseLike, TrackLike
 from trackfit.results.write import FileWriter
 
 _UNSAFE = re.compile(r"[^a-z0-9_-]+")
@@ -24,6 +25,7 @@ def figure_writers(
     responses: Sequence[ResponseLike],
     scene: Scene,
     *,
+    judgements: Sequence[JudgementLike] = (),
     on_path: PathValues | None = None,
     figure_format: str = "png",
 ) -> dict[str, FileWriter]:
@@ -44,6 +46,12 @@ def figure_writers(
         if len(track.table):
             name = f"figures/track_{file_stem(track.tag)}.{figure_format}"
             writers[name] = partial(_write_track, track, fixes, scene)
+    track_of = {track.tag: track for track in tracks if len(track.table)}
+    for judgement in judgements:
+        if judgement.tag in track_of and len(judgement.table):
+            draw = partial(judgement_figure, judgement, track_of[judgement.tag], scene)
+            name = f"figures/fixes_{file_stem(judgement.tag)}.{figure_format}"
+            writers[name] = partial(save_figure, draw)
     for page, panels in response_pages(responses).items():
         draw = partial(response_figure, panels, on_path)
         writers[f"figures/{page}.{figure_format}"] = partial(save_figure, draw)

@@ -29,7 +29,8 @@ _EDGED_FIXES = 400
 _MARGIN = 0.07
 _LEAST_SIDE_KM = 0.5
 _SHAPES = (0.7, 1.5)  # narrowest and widest map, width over height
-_HALO: list[Any] = [effects.withStroke(linewidth=2.2, foreground="white")]
+HALO: list[Any] = [effects.withStroke(linewidth=2.2, foreground="white")]
+"""A white rim that keeps small texts readable over anything."""
 
 
 @dataclass(frozen=True)
@@ -90,6 +91,19 @@ def draw_map(
     plane = scene.plane
     path = plane.to_plane(track.table["lon"].to_numpy(float), track.table["lat"].to_numpy(float))
     used = plane.to_plane(used_lonlat[:, 0], used_lonlat[:, 1])
+    draw_ground(axes, frame, scene)
+    _draw_drawn_paths(axes, track, plane)
+    _draw_ellipses(axes, track, plane)
+    draw_path(axes, path, track.table["in_gap"].to_numpy(bool))
+    _draw_fixes(axes, used)
+    shown = _draw_set_aside(axes, frame, aside_lonlat, plane)
+    _draw_ends(axes, path, scene)
+    draw_scale_bar(axes, frame, np.vstack([path, used]))
+    return len(aside_lonlat) - shown
+
+
+def draw_ground(axes: Axes, frame: Frame, scene: Scene) -> None:
+    """Set up an empty map: its edges and axes, contours and land."""
     axes.set(xlim=(frame.x_min, frame.x_max), ylim=(frame.y_min, frame.y_max))
     axes.set_aspect("equal", adjustable="box")
     axes.set(title="Map in the local plane (north is up at its centre)")
@@ -100,14 +114,6 @@ def draw_map(
         _draw_contours(axes, frame, scene.depth)
     if scene.coast is not None:
         _draw_land(axes, frame, scene.coast.land)
-    _draw_drawn_paths(axes, track, plane)
-    _draw_ellipses(axes, track, plane)
-    _draw_path(axes, path, track.table["in_gap"].to_numpy(bool))
-    _draw_fixes(axes, used)
-    shown = _draw_set_aside(axes, frame, aside_lonlat, plane)
-    _draw_ends(axes, path, scene)
-    _draw_scale_bar(axes, frame, np.vstack([path, used]))
-    return len(aside_lonlat) - shown
 
 
 def _rings_km(track: TrackLike, rows: np.ndarray, plane: Plane) -> Float[np.ndarray, "n v 2"]:
@@ -188,7 +194,7 @@ def _draw_ellipses(axes: Axes, track: TrackLike, plane: Plane) -> None:
     axes.add_line(Line2D([], [], color=style.BLUE, linewidth=0.7, alpha=0.8, label=word))
 
 
-def _draw_path(axes: Axes, path: Float[np.ndarray, "n 2"], in_gap: Bool[np.ndarray, " n"]) -> None:
+def draw_path(axes: Axes, path: Float[np.ndarray, "n 2"], in_gap: Bool[np.ndarray, " n"]) -> None:
     """Draw the mean path; every step that begins or ends in a gap is dashed."""
     dashed = in_gap[1:] | in_gap[:-1]
     turns = np.flatnonzero(np.diff(dashed)) + 1
@@ -257,7 +263,7 @@ def _draw_ends(axes: Axes, path: Float[np.ndarray, "n 2"], scene: Scene) -> None
         axes.scatter(x, y, marker="^", s=64, color=style.ORANGE, label="colony", **edge)
 
 
-def _draw_scale_bar(axes: Axes, frame: Frame, busy: Float[np.ndarray, "n 2"]) -> None:
+def draw_scale_bar(axes: Axes, frame: Frame, busy: Float[np.ndarray, "n 2"]) -> None:
     """Draw a bar of a round length in the emptiest corner."""
     length = round_length_km(frame.width * 0.24)
     share = length / frame.width
@@ -266,11 +272,11 @@ def _draw_scale_bar(axes: Axes, frame: Frame, busy: Float[np.ndarray, "n 2"]) ->
     x, y = min(corners, key=lambda corner: _crowd(at, corner, share))
     bar: dict[str, Any] = {"transform": axes.transAxes, "color": style.BLACK, "zorder": 9}
     axes.plot(
-        [x, x + share], [y, y], linewidth=2.4, solid_capstyle="butt", path_effects=_HALO, **bar
+        [x, x + share], [y, y], linewidth=2.4, solid_capstyle="butt", path_effects=HALO, **bar
     )
     words = f"{length:g} km" if length >= 1 else f"{1000 * length:g} m"
     text = axes.text(x + share / 2, y + 0.012, words, ha="center", va="bottom", fontsize=8, **bar)
-    text.set_path_effects(_HALO)
+    text.set_path_effects(HALO)
 
 
 def _crowd(at: Float[np.ndarray, "n 2"], corner: tuple[float, float], share: float) -> int:

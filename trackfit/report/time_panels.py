@@ -26,7 +26,7 @@ def draw_time_panels(
 
     Longitude runs on across the antimeridian; its tick labels stay in [-180, 180).
     """
-    time = _days(pd.DatetimeIndex(track.table["time"]))
+    time = days_since_1970(pd.DatetimeIndex(track.table["time"]))
     lon = np.unwrap(track.table["lon"].to_numpy(float), period=360)
     lat = track.table["lat"].to_numpy(float)
     sd_lon, sd_lat = _sd_deg(track.table)
@@ -37,9 +37,11 @@ def draw_time_panels(
         (lon_axes, lon, sd_lon, near_used, near_aside),
         (lat_axes, lat, sd_lat, used.lonlat[:, 1], aside.lonlat[:, 1]),
     ):
-        _shade_gaps(axes, time, in_gap)
+        shade_gaps(axes, time, in_gap)
         _draw_bands(axes, time, mean, sd)
-        _draw_marks(axes, _days(used.time), of_used, _days(aside.time), of_aside)
+        _draw_marks(
+            axes, days_since_1970(used.time), of_used, days_since_1970(aside.time), of_aside
+        )
     _dress(lon_axes, lat_axes, time)
 
 
@@ -65,16 +67,17 @@ def _beside(
     points: FixPoints, time: Float[np.ndarray, " n"], lon: Float[np.ndarray, " n"]
 ) -> Float[np.ndarray, " m"]:
     """Return the fixes' longitudes, whole turns added to come next to the path's."""
-    at = np.interp(_days(points.time), time, lon)
+    at = np.interp(days_since_1970(points.time), time, lon)
     return points.lonlat[:, 0] + 360 * np.round((at - points.lonlat[:, 0]) / 360)
 
 
-def _days(time: pd.DatetimeIndex) -> Float[np.ndarray, " n"]:
+def days_since_1970(time: pd.DatetimeIndex) -> Float[np.ndarray, " n"]:
     """Return times as matplotlib counts them: days since 1970 in UTC."""
     return np.asarray(time.as_unit("ns").asi8 / 86_400e9)
 
 
-def _shade_gaps(axes: Axes, time: Float[np.ndarray, " n"], in_gap: Bool[np.ndarray, " n"]) -> None:
+def shade_gaps(axes: Axes, time: Float[np.ndarray, " n"], in_gap: Bool[np.ndarray, " n"]) -> None:
+    """Shade the gaps of a track; times as matplotlib counts them."""
     label = "gap"
     edges = np.flatnonzero(np.diff(np.concatenate([[False], in_gap, [False]])))
     for first, after in edges.reshape(-1, 2):
@@ -126,13 +129,10 @@ def _draw_marks(
 def _dress(lon_axes: Axes, lat_axes: Axes, time: Float[np.ndarray, " n"]) -> None:
     margin = max(0.02 * (time[-1] - time[0]), _HOUR / 2 if len(time) > 1 else _HOUR)
     lon_axes.set_xlim(time[0] - margin, time[-1] + margin)
-    locator = mdates.AutoDateLocator(minticks=3, maxticks=7, tz="UTC")
-    lat_axes.xaxis.set_major_locator(locator)
-    lat_axes.xaxis.set_major_formatter(mdates.ConciseDateFormatter(locator, tz="UTC"))
-    lon_axes.tick_params(axis="x", labelbottom=False)
+    share_time_axis(lon_axes, lat_axes)
     lon_axes.set(title="Longitude and latitude against time")
     lon_axes.set(ylabel="longitude (degrees east)")
-    lat_axes.set(ylabel="latitude (degrees north)", xlabel="time (UTC)")
+    lat_axes.set(ylabel="latitude (degrees north)")
     for axes in (lon_axes, lat_axes):
         axes.yaxis.set_major_locator(MaxNLocator(6))
         axes.ticklabel_format(axis="y", useOffset=False)
@@ -140,6 +140,15 @@ def _dress(lon_axes: Axes, lat_axes: Axes, time: Float[np.ndarray, " n"]) -> Non
     lat_axes.set_ylim(max(south, -90.0), min(north, 90.0))
     if lon_axes.get_ylim()[1] >= 180 or lon_axes.get_ylim()[0] < -180:
         lon_axes.yaxis.set_major_formatter(FuncFormatter(wrapped_degrees))
+
+
+def share_time_axis(upper: Axes, lower: Axes) -> None:
+    """Write dates below the lower of two panels that share their time axis."""
+    locator = mdates.AutoDateLocator(minticks=3, maxticks=7, tz="UTC")
+    lower.xaxis.set_major_locator(locator)
+    lower.xaxis.set_major_formatter(mdates.ConciseDateFormatter(locator, tz="UTC"))
+    upper.tick_params(axis="x", labelbottom=False)
+    lower.set_xlabel("time (UTC)")
 
 
 def wrapped_degrees(value: float, position: int | None = None) -> str:

@@ -22,8 +22,27 @@ POSITION_COLUMNS = (
     "hours_to_fix",
     "in_gap",
     "at_fix",
+    "coast_adjusted",
 )
 """The columns of a filled track's table, in order."""
+
+POSITION_FLAGS = ("in_gap", "at_fix", "coast_adjusted")
+"""Those of them that hold truth values."""
+
+JUDGEMENT_COLUMNS = (
+    "time",
+    "lon",
+    "lat",
+    "predicted_lon",
+    "predicted_lat",
+    "offset_m",
+    "bearing_deg",
+    "distance_sd",
+    "p_value",
+    "expected_sd_m",
+    "flagged",
+)
+"""The columns of a judgement's table, in order."""
 
 
 class TrackLike(Protocol):
@@ -39,7 +58,11 @@ class TrackLike(Protocol):
 
     @property
     def draws_lonlat(self) -> Float[np.ndarray, "draws times 2"]:
-        """Drawn paths in degrees at the times of the table; there may be none."""
+        """Drawn paths in degrees at `draw_times`; there may be none."""
+
+    @property
+    def draw_times(self) -> pd.DatetimeIndex:
+        """Times of the drawn paths: those of the table, and more where they round the land."""
 
 
 class StatusLike(Protocol):
@@ -128,6 +151,22 @@ class ResponseLike(Protocol):
     @property
     def upper95(self) -> Float[np.ndarray, " m"]:
         """Upper edge of the 95 % band, km^2/h."""
+
+
+class JudgementLike(Protocol):
+    """The used fixes of one tag against their predictions from all its other fixes."""
+
+    @property
+    def tag(self) -> str:
+        """Name of the tag."""
+
+    @property
+    def table(self) -> pd.DataFrame:
+        """One row a fix, with the columns of `JUDGEMENT_COLUMNS`."""
+
+    @property
+    def flag_p_value(self) -> float:
+        """Fixes with a smaller p-value are flagged."""
 
 
 class FixesLike(Protocol):

@@ -12,9 +12,12 @@ import xarray as xr
 from trackfit.faults import ResultsError
 from trackfit.results import tables
 from trackfit.results.folder import recover
-from trackfit.results.inputs import POSITION_COLUMNS
+from trackfit.results.inputs import POSITION_COLUMNS, POSITION_FLAGS
 from trackfit.results.manifest import RECORD, read_record
 from trackfit.results.record import FORMAT_VERSION
+
+JUDGEMENT_FILE = "fix_judgement.csv"
+"""Where the judgement of the used fixes stands in a folder of results."""
 
 
 @dataclass(frozen=True)
@@ -31,6 +34,8 @@ class Results:
         Tag, status, parameter, unit, estimate, sd, lower95, upper95.
     set_aside
         Fixes not used, as they were read, each with its reason.
+    fix_judgement
+        Tag, then the columns of a judgement of the used fixes; empty if none was written.
     drawn_paths
         Tag, draw, time, lon, lat; empty if none were asked.
     record
@@ -41,6 +46,7 @@ class Results:
     positions: pd.DataFrame
     parameters: pd.DataFrame
     set_aside: pd.DataFrame
+    fix_judgement: pd.DataFrame
     drawn_paths: pd.DataFrame
     record: Mapping[str, object]
 
@@ -72,6 +78,7 @@ def read_results(folder: Path) -> Results:
         positions=_positions(folder),
         parameters=_read(folder / "parameters.csv", tables.read_table),
         set_aside=_read(folder / "set_aside.csv", tables.read_set_aside),
+        fix_judgement=_judgement(folder / JUDGEMENT_FILE),
         drawn_paths=_drawn(folder),
         record=record,
     )
@@ -94,6 +101,10 @@ def _read(path: Path, reader: Callable[[Path], pd.DataFrame]) -> pd.DataFrame:
         raise ResultsError(f"{path}: cannot be read back ({fault}); run the study again") from fault
 
 
+def _judgement(path: Path) -> pd.DataFrame:
+    return _read(path, tables.read_table) if path.exists() else tables.judgements_table([])
+
+
 def _drawn(folder: Path) -> pd.DataFrame:
     found = [p for p in (folder / "drawn_paths.csv", folder / "drawn_paths.csv.gz") if p.exists()]
     return _read(found[0], tables.read_table) if found else tables.drawn_table([])
@@ -113,7 +124,7 @@ def _from_geopackage(path: Path) -> pd.DataFrame:
 
 def _typed(table: pd.DataFrame) -> pd.DataFrame:
     time = table["time"].dt.tz_convert("UTC").dt.as_unit("ns")
-    flags = {name: table[name].astype(bool) for name in ("in_gap", "at_fix")}
+    flags = {name: table[name].astype(bool) for name in POSITION_FLAGS}
     return table.assign(time=time, **flags)
 
 

@@ -41,6 +41,8 @@ class RecordInfo:
         Sentences for the user, in the order they arose.
     created
         When the run ended, in UTC; now if not given.
+    findings
+        What was found out about the fits: verdicts, comparisons, trials.
     title, institution, references
         Words for the NetCDF file; left out, it says that they are not stated.
     """
@@ -51,6 +53,7 @@ class RecordInfo:
     notes: Sequence[str] = ()
     warnings: Sequence[str] = ()
     created: datetime.datetime = field(default_factory=lambda: datetime.datetime.now(datetime.UTC))
+    findings: Mapping[str, object] = field(default_factory=dict)
     title: str | None = None
     institution: str | None = None
     references: str | None = None
@@ -82,6 +85,7 @@ def build_record(
         "inputs": {name: _checksum(name, path) for name, path in info.inputs.items()},
         "formats": formats,
         "tags": _tags(tracks, fits, fixes),
+        "findings": info.findings,
         "notes": info.notes,
         "warnings": info.warnings,
     }

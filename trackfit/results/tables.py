@@ -12,7 +12,15 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
-from trackfit.results.inputs import POSITION_COLUMNS, FitLike, ResponseLike, TrackLike
+from trackfit.results.inputs import (
+    JUDGEMENT_COLUMNS,
+    POSITION_COLUMNS,
+    POSITION_FLAGS,
+    FitLike,
+    JudgementLike,
+    ResponseLike,
+    TrackLike,
+)
 
 DRAWS_COMPRESSED_FROM_ROWS = 200_000
 """From so many rows on, drawn paths are written as .csv.gz."""
@@ -96,6 +104,30 @@ def write_responses(path: Path, responses: Sequence[ResponseLike]) -> None:
     _write(path, table.loc[:, columns], lambda _: "{:.9g}")
 
 
+def write_judgements(path: Path, judgements: Sequence[JudgementLike]) -> None:
+    """Write every used fix with its distance from where all other fixes of its tag place it."""
+    _write(path, judgements_table(judgements), _judgement_format)
+
+
+def judgements_table(judgements: Sequence[JudgementLike]) -> pd.DataFrame:
+    """Return the tables of all tags, one under the other, with the column tag in front."""
+    parts = [j.table.loc[:, list(JUDGEMENT_COLUMNS)].assign(tag=j.tag) for j in judgements]
+    columns = ["tag", *JUDGEMENT_COLUMNS]
+    if not parts:
+        return pd.DataFrame(columns=columns)
+    return pd.concat(parts, ignore_index=True).loc[:, columns]
+
+
+def _judgement_format(column: str) -> str:
+    # A p-value may be as small as 1e-300.
+    return "{:.3g}" if column == "p_value" else _position_format(column)
+
+
+def write_table(path: Path, table: pd.DataFrame) -> None:
+    """Write any table: text made harmless, times in UTC, numbers to nine digits."""
+    _write(path, table, lambda _: "{:.9g}")
+
+
 def write_drawn_paths(path: Path, tracks: Sequence[TrackLike]) -> Path:
     """Write drawn paths (tag, draw, time, lon, lat); return the path written.
 
@@ -122,14 +154,14 @@ def _drawn_of(track: TrackLike) -> pd.DataFrame:
     flat = track.draws_lonlat.reshape(-1, 2)
     rows = np.tile(np.arange(times), draws)
     number = np.repeat(np.arange(1, draws + 1), times)
-    time = track.table["time"].iloc[rows].reset_index(drop=True)
+    time = track.draw_times[rows]
     return pd.DataFrame(
         {"tag": track.tag, "draw": number, "time": time, "lon": flat[:, 0], "lat": flat[:, 1]}
     )
 
 
 def _position_format(column: str) -> str:
-    if column in ("lon", "lat"):
+    if column.endswith(("lon", "lat")):
         return "{:.6f}"
     return "{:.1f}" if column.endswith("_m") else "{:.3f}"
 
@@ -163,7 +195,31 @@ def read_table(path: Path) -> pd.DataFrame:
     return pd.DataFrame({name: _column(str(name), raw[name]) for name in raw.columns})
 
 
-_TEXT = frozenset({"tag", "status", "parameter", "unit", "term", "layer", "file", "reason"})
+_TEXT = frozenset(
+    {
+        "tag",
+        "status",
+        "parameter",
+        "unit",
+        "term",
+        "layer",
+        "file",
+        "reason",
+        "about",
+        "finding",
+        "sentence",
+        "measure",
+        "kind",
+        "basis",
+        "shape",
+        "first",
+        "second",
+        "residuals",
+        "model",
+        "motion",
+        "outcome",
+    }
+)
 
 
 def _column(name: str, cells: pd.Series) -> pd.Series:
@@ -171,7 +227,7 @@ def _column(name: str, cells: pd.Series) -> pd.Series:
         return cells.map(text_from_cell)
     if name == "time":
         return pd.to_datetime(cells, utc=True, format="ISO8601").dt.as_unit("ns")
-    if name in ("in_gap", "at_fix"):
+    if name in (*POSITION_FLAGS, "flagged", "concern"):
         return cells == "true"
     return pd.to_numeric(cells.mask(cells == ""))
 

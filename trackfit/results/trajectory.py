@@ -27,6 +27,10 @@ _DATA: Mapping[str, tuple[str, str]] = {
 _FLAGS = {
     "in_gap": ("position lies in a gap between fixes", "outside_gap inside_gap"),
     "at_fix": ("a fix in use stands at this time", "no_fix fix"),
+    "coast_adjusted": (
+        "the coast moved the position or its ellipses",
+        "not_adjusted adjusted",
+    ),
 }
 
 

@@ -1,0 +1,1 @@
+"""Reasons to set a fix aside before anything is fitted."""

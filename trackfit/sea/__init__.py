@@ -1,0 +1,1 @@
+"""Paths that know the sea: no position on land, no step across it."""
