@@ -8,12 +8,13 @@ import pytest
 from conftest import DEMO_TAGS, copied_demo
 
 import trackfit
-from trackfit.analysis import NO_ERROR, OTHER_TAG, Prepared, _study_area, prepare
+from trackfit.analysis import Prepared, prepare
 from trackfit.faults import FixesError, LayerError, StudyError
 from trackfit.inference.fit import FitStatus
 from trackfit.layers import Layer
 from trackfit.paths import hours_since_1970
 from trackfit.study import read_study
+from trackfit.usable import NO_ERROR, OTHER_TAG, study_area
 
 
 def prepared_of(folder, **keys) -> Prepared:
@@ -105,9 +106,9 @@ def test_progress_is_told_by_tag(tmp_path):
 
 
 def test_the_study_area_reaches_a_quarter_beyond_the_fixes_and_fifty_kilometres_at_least():
-    near = _study_area(np.array([[0.0, 0.0], [10.0, 20.0]]))
+    near = study_area(np.array([[0.0, 0.0], [10.0, 20.0]]))
     assert dataclasses.astuple(near) == (-50.0, -50.0, 60.0, 70.0)
-    far = _study_area(np.array([[0.0, 0.0], [1000.0, 20.0]]))
+    far = study_area(np.array([[0.0, 0.0], [1000.0, 20.0]]))
     assert dataclasses.astuple(far) == (-250.0, -250.0, 1250.0, 270.0)
 
 

@@ -18,7 +18,7 @@ from trackfit.inference.fit import fit_track
 from trackfit.inference.parameters import Parameter, ParameterSet
 from trackfit.inference.task import FitSettings, Model, TrackData
 from trackfit.layers.layer import Box, Coast
-from trackfit.layers.shore import CLEARANCE_KM, Shore, widened
+from trackfit.layers.shore import CLEARANCE_KM, EXACT_CELLS, Shore, widened
 from trackfit.motion import Diffusive, Persistent, VelocityField
 from trackfit.paths import fill_track
 from trackfit.sea.bounds import SeaBounds, Strides
@@ -207,11 +207,13 @@ def test_the_raster_changes_no_answer(place):
     inside = start[(np.abs(start[:, 0]) < 11.9) & (start[:, 1] > -5.9) & (start[:, 1] < 13.9)]
     exact = shapely.distance(shapely.boundary(land), shapely.points(inside))
     exact *= np.where(shapely.contains_xy(land, *inside.T), -1.0, 1.0)
-    close = np.abs(exact) < 1.5
-    # bilinear between cells of 47 m: a tenth of a cell, or its side where the shore has a corner
-    error = np.abs(shore.offing_at(inside) - exact)[close]
-    assert np.median(error) < 0.1 * shore.cell_km
-    assert error.max() < shore.cell_km
+    off = np.abs(shore.offing_at(inside) - exact) / shore.cell_km
+    near = np.abs(exact) < EXACT_CELLS * shore.cell_km
+    # bilinear between cells of 47 m, whose side it may miss where the shore has a corner; far off
+    # the distance is between centres of cells
+    assert np.median(off[near]) < 0.01
+    assert np.median(off[~near]) < 0.6
+    assert off.max() < 1.0
 
 
 def test_the_way_round_a_spit_is_near_the_shortest():

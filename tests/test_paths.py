@@ -40,7 +40,7 @@ EPOCH_H = 438_000.0
 COLUMNS = [
     "time", "lon", "lat", "sd_m", "ellipse_bearing_deg", "ellipse50_major_m",
     "ellipse50_minor_m", "ellipse95_major_m", "ellipse95_minor_m", "hours_to_fix", "in_gap",
-    "at_fix",
+    "at_fix", "coast_adjusted",
 ]  # fmt: skip
 FIX_HOURS = EPOCH_H + np.array([0.3, 1.0, 1.0, 2.0 + 0.3 / 3600, 5.4, 20.0, 20.5, 33.75])
 
@@ -86,8 +86,8 @@ def test_the_columns_and_their_types(fit):
     table = filled(fit).table
     assert table.columns.tolist() == COLUMNS
     assert table["time"].dtype == "datetime64[ns, UTC]"
-    assert [table[c].dtype for c in ("in_gap", "at_fix")] == [np.dtype(bool)] * 2
-    assert all(table[c].dtype == np.dtype(float) for c in COLUMNS[1:-2])
+    assert [table[c].dtype for c in COLUMNS[-3:]] == [np.dtype(bool)] * 3
+    assert all(table[c].dtype == np.dtype(float) for c in COLUMNS[1:-3])
     assert not table.isna().any(axis=None)
     assert table["time"].is_monotonic_increasing
     assert table["time"].is_unique
