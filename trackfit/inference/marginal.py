@@ -38,6 +38,7 @@ from trackfit.inference.sites import (
     tilted,
 )
 from trackfit.inference.tails import Tilted
+from trackfit.motion.velocity import Basis
 
 MAX_ROUNDS = 60
 SWEEPS_PER_ROUND = 4
@@ -47,10 +48,14 @@ SITE_TOLERANCE = 1e-6
 
 @dataclass(frozen=True)
 class Warm:
-    """Where an approximation starts: states, and sites where tails are heavy."""
+    """Where an approximation starts: states, and sites where tails are heavy.
+
+    `basis` is the field's at the states where it is known: layers are then not asked again.
+    """
 
     states: Float[np.ndarray, "states dim"]
     sites: Sites | None = None
+    basis: Basis | None = None
 
 
 @dataclass(frozen=True)
@@ -75,7 +80,8 @@ class Approximation:
     @property
     def warm(self) -> Warm:
         """A start for nearby parameters."""
-        return Warm(self.mode.states, self.mode.sites if self.problem.observations.heavy else None)
+        sites = self.mode.sites if self.problem.observations.heavy else None
+        return Warm(self.mode.states, sites, self.mode.point.basis)
 
     @cached_property
     def spread(self) -> Spread:
@@ -135,7 +141,7 @@ def approximate(
     observations = problem.observations
     if not observations.heavy:
         sites = observations.gaussian_sites(problem.error_parameters(theta)[0])
-        mode = find_mode(problem, theta, sites, warm.states, tolerance)
+        mode = find_mode(problem, theta, sites, warm.states, tolerance, warm.basis)
         return Approximation(problem, mode, None, None, None, 0)
     try:
         return _propagate(problem, theta, warm, tolerance, site_tolerance)
@@ -188,7 +194,7 @@ def _propagate(
     if sites is None:
         fix_hours = problem.hours[observations.state]
         sites = starting_sites(observations, fix_hours, log_scale, log_nu)
-    point = evaluate_at(problem, theta, warm.states)
+    point = evaluate_at(problem, theta, warm.states, warm.basis)
     if not np.isfinite(point.value):
         raise ModeNotFound("the density is not finite at the start")
     sweeps, mixer = 0, SiteMixer()
