@@ -49,9 +49,9 @@ def parameter_table(fits: "Sequence[Fit]") -> list[str]:
 
 
 def _numbers(row: "pd.Series") -> Sequence[str]:
-    """Estimate, sd and limits; a parameter that the study fixes has no sd to quote."""
-    if row["role"] == "fixed":
-        return [f"{row['estimate']:.4g}", "fixed", "", ""]
+    """Estimate, sd and limits; what the study fixes or the fit chooses has no sd to quote."""
+    if row["role"] in ("fixed", "chosen"):
+        return [f"{row['estimate']:.4g}", str(row["role"]), "", ""]
     return [f"{row[name]:.4g}" for name in ("estimate", "sd", "lower95", "upper95")]
 
 

@@ -10,7 +10,7 @@ from jaxtyping import Float
 from trackfit.inference.estimates import NORMAL_95
 from trackfit.inference.fit import Fit
 from trackfit.layers.splines import spline_jet
-from trackfit.motion import LayerTerm
+from trackfit.motion import DistanceTerm, SmoothTerm
 from trackfit.motion.terms import TermName
 
 POINTS = 101
@@ -82,7 +82,7 @@ def _along_path(fit: Fit, slot: int) -> Float[np.ndarray, " n"]:
     term = fit.model.field.terms[slot]
     problem = fit.states.problem
     x, y = fit.states.positions_km().T
-    if not isinstance(term, LayerTerm):
+    if isinstance(term, DistanceTerm):
         point = np.asarray(term.point_km)
         return np.hypot(x - point[0], y - point[1])
     when = problem.track.times.terms[slot]
@@ -92,9 +92,12 @@ def _along_path(fit: Fit, slot: int) -> Float[np.ndarray, " n"]:
 
 def _basis(fit: Fit, slot: int, at: Float[np.ndarray, " m"]) -> Float[np.ndarray, "m amplitudes"]:
     term = fit.model.field.terms[slot]
-    if not isinstance(term, LayerTerm):
+    if isinstance(term, DistanceTerm):
         return at[:, None]
     z = (at - float(term.centre)) / float(term.scale)
+    if isinstance(term, SmoothTerm):
+        bends = np.asarray(term.curve.values(z)[0] - term.curve.values(np.zeros(1))[0])
+        return np.column_stack([z, bends.T])
     return np.stack([z, z**2], axis=1) if term.humped else z[:, None]
 
 

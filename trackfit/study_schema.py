@@ -194,10 +194,11 @@ class Preference(Table):
     )
     layer: Text | None = setting(None, "The layer the term is made of.")
     point: Point | None = setting(None, "Or the place whose distance the term uses.")
-    shape: Literal["linear", "humped", "distance"] = setting(
+    shape: Literal["linear", "humped", "smooth", "distance"] = setting(
         ...,
         "`linear`: the more the better, or the worse. `humped`: a best value with less on both "
-        "sides. `distance`: towards or away from a point.",
+        "sides. `smooth`: a curve, as wiggly as the fixes ask for. `distance`: towards or away "
+        "from a point.",
     )
 
     @property

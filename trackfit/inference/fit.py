@@ -26,6 +26,7 @@ from trackfit.inference.integrate import PathMixture, WeightedPoints, lay_points
 from trackfit.inference.laplace import mode_sensitivity
 from trackfit.inference.optimise import Minimum, Rejected, nearest_positive
 from trackfit.inference.search import TOLERANCE, Search
+from trackfit.inference.smoothing import settle, smooth_groups
 from trackfit.inference.states import States
 from trackfit.inference.task import FitSettings, Model, TrackData
 
@@ -73,7 +74,7 @@ class Fit:
     ----------
     parameters
         One row a parameter: parameter, unit, estimate, sd, lower95, upper95, role (estimated, fixed
-        or derived from others).
+        derived from others, or chosen: the bends of a smooth term).
     log_marginal
         Laplace log marginal likelihood of the fixes (in km) at the estimates, priors left out.
     step_check
@@ -125,10 +126,16 @@ def fit_track(
         if settings.coarse_factor > 1:
             coarse = Search(data, model, coarse_step, np.zeros(0))
             found = coarse.run(start, metric, settings.max_iterations, _part(progress, 0.0, 0.3))
+            if smooth_groups(model.parameters):
+                found, _ = settle(
+                    coarse, found, coarse.hessian(found), settings.max_iterations, _still
+                )
+                fine.parameters = coarse.parameters
             start, metric = found.at, coarse.metric(found)
         found = fine.run(start, metric, settings.max_iterations, _part(progress, 0.3, 0.6))
         progress(0.6, "uncertainty")
         hessian = fine.hessian(found)
+        found, hessian = settle(fine, found, hessian, settings.max_iterations, _still)
     except Rejected:
         return _empty(data, model, settings, FitStatus.NO_MODE)
     fit = _conclude(data, model, settings, fine, found, hessian, progress)
@@ -137,6 +144,10 @@ def fit_track(
         fit = _with_step_check(fit, data, settings, report_hours, hessian)
     progress(1.0, "done")
     return fit
+
+
+def _still(iteration: int, decrement: float) -> None:
+    """Tell nothing of a search within a search."""
 
 
 def _part(progress: Progress, begin: float, end: float) -> Callable[[int, float], None]:
@@ -188,7 +199,7 @@ def _conclude(
         iterations=found.iterations,
         evaluations=search.evaluations,
         step_check=None,
-        model=model,
+        model=replace(model, parameters=parameters.first(len(model.parameters.all))),
         states=states,
     )
 
@@ -208,9 +219,7 @@ def _with_step_check(
     metric = nearest_positive(hessian, floor)
     change = np.full(len(free), np.nan)
     try:
-        found = search.run(
-            fit.states.theta, metric, settings.max_iterations, lambda iteration, decrement: None
-        )
+        found = search.run(fit.states.theta, metric, settings.max_iterations, _still)
         if found.converged:
             change = found.at - fit.states.theta
     except Rejected:

@@ -17,7 +17,8 @@ class Parameter:
     parameter keeps its start.
 
     `reach` is the longest change the search makes in one step; one that is not `reported` has no
-    row in the table of parameters.
+    row in the table of parameters. `smooth` names the curve whose bend it is: its prior sd is then
+    chosen by the fit (`trackfit.inference.smoothing`).
     """
 
     name: str
@@ -29,6 +30,7 @@ class Parameter:
     reach: float
     fixed: bool = False
     reported: bool = True
+    smooth: str | None = None
 
 
 @dataclass(frozen=True)
@@ -59,6 +61,10 @@ class ParameterSet:
         precision = np.array([p.prior_sd**-2.0 for p in self.free])
         offset = free - mean
         return 0.5 * float(np.sum(precision * offset**2)), precision * offset
+
+    def first(self, count: int) -> ParameterSet:
+        """The set of the first parameters."""
+        return ParameterSet(self.all[:count])
 
     def with_spells(self, count: int) -> ParameterSet:
         """The set with one standard normal number a spell at its end, if there are none yet."""
