@@ -230,12 +230,13 @@ def _term_parameters(
 
 
 def _bends(study: Study, name: str, z: Float[np.ndarray, " n"], linear: float) -> list[Parameter]:
-    """The bends of a smooth curve; they start as large as a linear preference's typical slope.
+    """The bends of a smooth curve; they start with slopes a third of a linear preference's.
 
-    `linear` is the slope of h in z that makes the study's typical speed.
+    `linear` is the slope of h in z that makes the study's typical speed. A search is surer where
+    the curve has yet to unbend than where it has to be straightened.
     """
     slopes = np.asarray(fit_curve(z).values(jnp.asarray(z))[1])
-    spread = linear / float(np.sqrt(np.sum(np.mean(slopes**2, axis=1))))
+    spread = linear / (3.0 * float(np.sqrt(np.sum(np.mean(slopes**2, axis=1)))))
     return [
         Parameter(
             name=f"{name}.bend_{i + 1}",

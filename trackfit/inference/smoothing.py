@@ -10,7 +10,8 @@ beta integrated out by Laplace's method, is stationary where
     tau^2 = beta' beta / edf
 
 (MacKay 1992, Neural Comput. 4:415; for penalised regression Wood & Fasiolo 2017, Biometrics
-73:1071, whose update this is). Fitting and updating take turns until tau settles.
+73:1071, whose update this is). It is repeated on the quadratic approximation of the log likelihood
+at the mode until tau settles there; then the parameters are fitted anew, and so on.
 """
 
 from __future__ import annotations
@@ -25,15 +26,15 @@ from trackfit.inference.optimise import Minimum, nearest_positive
 from trackfit.inference.parameters import ParameterSet
 from trackfit.inference.search import Search
 
-SETTLED = 0.05
-"""Change of log tau that is none: a tenth of what would be seen in a curve."""
+SETTLED, SETTLED_BENDS = 0.05, 0.03
+"""Tau has settled where its logarithm, or the number of bends told, moves by less."""
 
-MOST_TURNS = 15
-LONGEST = np.log(10.0)
+MOST_TURNS, MOST_UPDATES = 10, 500
+LONGEST = (np.log(0.1), np.log(3.0))
+"""How far log tau goes on one quadratic approximation."""
+
 LEAST_SHARE = 1e-3
 """Least tau, as a share of what it started from: the curve is then a straight line."""
-
-LEAST_BENDS = 1e-3
 
 
 def smooth_groups(parameters: ParameterSet) -> dict[str, Float[np.ndarray, " bends"]]:
@@ -60,30 +61,50 @@ def effective_bends(
 def with_spread(
     parameters: ParameterSet,
     free: Float[np.ndarray, " free"],
-    covariance: Float[np.ndarray, "free free"],
-) -> tuple[ParameterSet, float]:
-    """The set with every smooth term's tau updated, and the largest change of log tau.
+    hessian: Float[np.ndarray, "free free"],
+) -> tuple[ParameterSet, bool]:
+    """The set with every smooth term's tau updated; says whether all had settled before.
 
     Parameters
     ----------
-    free, covariance
-        The mode and the inverse Hessian there.
+    free, hessian
+        The mode, and the Hessian of the negative log posterior there.
     """
-    told = effective_bends(parameters, covariance)
-    new, largest = {}, 0.0
-    for name, at in smooth_groups(parameters).items():
-        first = parameters.free[at[0]]
-        log_tau = np.log(first.prior_sd)
-        wanted = 0.5 * np.log(np.sum(free[at] ** 2) / max(told[name], LEAST_BENDS) + 1e-300)
-        change = float(np.clip(wanted - log_tau, -LONGEST, LONGEST))
-        least = np.log(LEAST_SHARE * first.reach)
-        updated = max(log_tau + change, least)
-        largest = max(largest, abs(updated - log_tau))
-        new[name] = float(np.exp(updated))
-    every = tuple(
-        p if p.smooth is None else replace(p, prior_sd=new[p.smooth]) for p in parameters.all
+    groups = smooth_groups(parameters)
+    floor = np.array([1e-6 * p.reach**-2.0 for p in parameters.free])
+    before = np.array([p.prior_sd**-2.0 for p in parameters.free])
+    mean = np.array([p.prior_mean for p in parameters.free])
+    tau = {name: parameters.free[at[0]].prior_sd for name, at in groups.items()}
+    first = dict(tau)
+    told: dict[str, list[float]] = {name: [] for name in groups}
+    for _ in range(MOST_UPDATES):
+        now = before.copy()
+        for name, at in groups.items():
+            now[at] = tau[name] ** -2.0
+        covariance = np.linalg.inv(nearest_positive(hessian + np.diag(now - before), floor))
+        at_mode = free - covariance @ ((now - before) * (free - mean))
+        moved = 0.0
+        for name, at in groups.items():
+            own = np.trace(covariance[np.ix_(at, at)])
+            bends = float(np.clip(len(at) - own / tau[name] ** 2, 1e-9, len(at)))
+            told[name].append(bends)
+            wanted = 0.5 * np.log(np.sum(at_mode[at] ** 2) / bends + 1e-300)
+            low, high = np.log(first[name]) + np.array(LONGEST)
+            low = max(low, np.log(LEAST_SHARE * parameters.free[at[0]].reach))
+            wanted = float(np.clip(wanted, low, max(high, low)))
+            moved = max(moved, abs(wanted - np.log(tau[name])))
+            tau[name] = float(np.exp(wanted))
+        if moved < 1e-4:
+            break
+    settled = all(
+        abs(np.log(tau[name] / first[name])) < SETTLED
+        or abs(told[name][-1] - told[name][0]) < SETTLED_BENDS
+        for name in groups
     )
-    return replace(parameters, all=every), largest
+    every = tuple(
+        p if p.smooth is None else replace(p, prior_sd=tau[p.smooth]) for p in parameters.all
+    )
+    return replace(parameters, all=every), settled
 
 
 def settle(
@@ -95,6 +116,8 @@ def settle(
 ) -> tuple[Minimum, Float[np.ndarray, "free free"]]:
     """Update the spreads and search anew, in turn; the search's parameters are replaced.
 
+    A search that does not converge ends it.
+
     Raises
     ------
     Rejected
@@ -103,12 +126,17 @@ def settle(
     if not smooth_groups(search.parameters):
         return found, hessian
     for _ in range(MOST_TURNS):
-        floor = np.array([p.reach**-2.0 for p in search.parameters.free])
-        covariance = np.linalg.inv(nearest_positive(hessian, 1e-6 * floor))
-        updated, change = with_spread(search.parameters, found.at, covariance)
-        if change < SETTLED:
+        if not found.converged:
             break
+        updated, settled = with_spread(search.parameters, found.at, hessian)
+        if settled:
+            break
+        before = np.array([p.prior_sd**-2.0 for p in search.parameters.free])
         search.parameters = updated
-        found = search.run(found.at, nearest_positive(hessian, floor), max_iterations, progress)
+        free = search.parameters.free
+        change = np.array([p.prior_sd**-2.0 for p in free]) - before
+        floor = np.array([p.reach**-2.0 for p in free])
+        metric = nearest_positive(hessian + np.diag(change), floor)
+        found = search.run(found.at, metric, max_iterations, progress)
         hessian = search.hessian(found)
     return found, hessian
