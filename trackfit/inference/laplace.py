@@ -42,10 +42,25 @@ The states are then a ten-thousandth of their joint standard deviation from the 
 """
 
 MAX_HALVINGS = 25
+MODE_HALVINGS = 150
+"""Halvings of Newton steps after which a mode is given up: searches that find one need some ten."""
 
 
 class ModeNotFound(Exception):
     """No mode of the states was found at these parameters; the step that asked is rejected."""
+
+
+class Patience:
+    """How often the steps towards one mode may still be halved."""
+
+    def __init__(self, halvings: int = MODE_HALVINGS) -> None:
+        self.left = halvings
+
+    def spend(self) -> None:
+        """Take one halving from what is left."""
+        self.left -= 1
+        if self.left < 0:
+            raise ModeNotFound(f"steps were halved more than {MODE_HALVINGS} times")
 
 
 @dataclass(frozen=True)
@@ -97,6 +112,7 @@ def find_mode(
     point = evaluate_at(problem, theta, start)
     if not np.isfinite(point.value):
         raise ModeNotFound("the density is not finite at the start")
+    patience = Patience()
     for iteration in range(MAX_NEWTON):
         band, cholesky, exact = factored(problem, point, sites)
         gradient = point.full_gradient(problem, sites)
@@ -108,7 +124,7 @@ def find_mode(
             if not exact:
                 raise ModeNotFound("the Hessian is indefinite where the gradient vanishes")
             return Mode(theta, point, sites, band, cholesky, iteration)
-        point = line_search(problem, theta, sites, point, step, decrement)
+        point = line_search(problem, theta, sites, point, step, decrement, patience)
     raise ModeNotFound(f"Newton's method did not settle in {MAX_NEWTON} steps")
 
 
@@ -129,6 +145,7 @@ def line_search(
     point: Point,
     step: Float[np.ndarray, "states dim"],
     decrement: float,
+    patience: Patience,
 ) -> Point:
     """Walk along a Newton step until the density has fallen enough (Armijo's rule)."""
     value = point.density(problem, sites)
@@ -139,6 +156,7 @@ def line_search(
         trial = evaluate_at(problem, theta, point.states + length * step)
         if trial.density(problem, sites) <= value - 1e-4 * length * decrement + noise:
             return trial
+        patience.spend()
         length *= 0.5
     raise ModeNotFound("no step downhill was found")
 

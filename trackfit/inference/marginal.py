@@ -19,6 +19,7 @@ from trackfit.inference.laplace import (
     DECREMENT_TOLERANCE,
     Mode,
     ModeNotFound,
+    Patience,
     Spread,
     factored,
     find_mode,
@@ -191,7 +192,7 @@ def _propagate(
     point = evaluate_at(problem, theta, warm.states)
     if not np.isfinite(point.value):
         raise ModeNotFound("the density is not finite at the start")
-    sweeps, mixer = 0, SiteMixer()
+    sweeps, mixer, patience = 0, SiteMixer(), Patience()
     for rounds in range(MAX_ROUNDS):
         try:
             band, cholesky, exact = factored(problem, point, sites)
@@ -222,7 +223,7 @@ def _propagate(
                 raise ModeNotFound("the Hessian is indefinite where the gradient vanishes")
             mode = Mode(theta, point, sites, band, cholesky, rounds)
             return Approximation(problem, mode, spread, cavity, moments, sweeps)
-        point = _step(problem, theta, sites, point)
+        point = _step(problem, theta, sites, point, patience)
     raise ModeNotFound(f"the sites did not settle in {MAX_ROUNDS} rounds")
 
 
@@ -253,10 +254,12 @@ def _kept_positive(
     raise ModeNotFound("no change of the sites keeps the Hessian positive definite")
 
 
-def _step(problem: TrackProblem, theta: np.ndarray, sites: Sites, point: Point) -> Point:
+def _step(
+    problem: TrackProblem, theta: np.ndarray, sites: Sites, point: Point, patience: Patience
+) -> Point:
     """One Newton step of the states with the sites held."""
     _, cholesky, _ = factored(problem, point, sites)
     gradient = point.full_gradient(problem, sites)
     step = -cholesky.solve(gradient.reshape(-1)).reshape(gradient.shape)
     decrement = -float(np.sum(gradient * step))
-    return line_search(problem, theta, sites, point, step, decrement)
+    return line_search(problem, theta, sites, point, step, decrement, patience)
