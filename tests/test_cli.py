@@ -23,6 +23,7 @@ import trackfit_cli
 from trackfit_cli import app as commands
 from trackfit_cli import demo, guard, story, words
 from trackfit_cli.exits import EXIT_CODES, ExitCode
+from trackfit_cli.interrupts import no_interrupt_lost
 
 import trackfit
 from trackfit import faults
@@ -264,6 +265,56 @@ def test_an_interruption_ends_with_130_and_a_sentence(
     out, err = capsys.readouterr()
     assert out == ""
     assert err.strip() == guard.INTERRUPTED
+
+
+class Swallowing:
+    """A finaliser that is interrupted: Python cannot pass the exception on."""
+
+    def __del__(self) -> None:
+        raise KeyboardInterrupt
+
+
+def test_an_interrupt_that_a_callback_swallowed_comes_again(
+    library: FakeLibrary, study: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def swallowed(*arguments: object, **options: object) -> None:
+        Swallowing()
+        for _ in range(1000):
+            time.sleep(0.01)
+
+    monkeypatch.setattr(trackfit, "prepare", swallowed)
+    began = time.monotonic()
+    assert trackfit_cli.main(["run", study]) == ExitCode.INTERRUPTED
+    assert time.monotonic() - began < 5
+
+
+def test_other_unraisable_errors_go_where_they_went(monkeypatch: pytest.MonkeyPatch) -> None:
+    told: list[object] = []
+
+    def record(swallowed: "sys.UnraisableHookArgs") -> None:
+        told.append(swallowed.exc_type)
+
+    monkeypatch.setattr(sys, "unraisablehook", record)
+    with no_interrupt_lost():
+        assert sys.unraisablehook is not record
+        sys.unraisablehook(SimpleNamespace(exc_type=ValueError))  # type: ignore[arg-type]
+    assert told == [ValueError]
+    assert sys.unraisablehook is record
+
+
+def test_an_interrupt_inside_exec_ends_a_module_with_its_code(tmp_path: Path) -> None:
+    """`python -m` would end by the signal, were it not forgotten."""
+    program = tmp_path / "program.py"
+    program.write_text(
+        "import sys\nfrom trackfit_cli.interrupts import forget_interrupt\n"
+        "try:\n    exec('raise KeyboardInterrupt')\nexcept KeyboardInterrupt:\n"
+        "    forget_interrupt()\nsys.exit(130)\n"
+    )
+    path = os.pathsep.join([str(tmp_path), os.environ.get("PYTHONPATH", "")])
+    ended = subprocess.run(
+        [sys.executable, "-m", "program"], env={**os.environ, "PYTHONPATH": path}
+    )
+    assert ended.returncode == 130
 
 
 def test_a_fault_of_our_own_is_one_sentence_and_a_file(
