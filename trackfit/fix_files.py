@@ -221,10 +221,10 @@ class _Rows:
     def _notes(self, file: str) -> tuple[str, ...]:
         if not self._long_lines:
             return ()
-        return (
-            f"{file}: {len(self._long_lines)} rows run over several lines inside quotation marks, "
-            f"the first from line {self._long_lines[0]}",
-        )
+        count, first = len(self._long_lines), self._long_lines[0]
+        runs = "1 row runs" if count == 1 else f"{count} rows run"
+        where = "from line" if count == 1 else "the first from line"
+        return (f"{file}: {runs} over several lines inside quotation marks, {where} {first}",)
 
 
 def _is_blank(cells: list[str]) -> bool:

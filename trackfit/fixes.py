@@ -350,7 +350,7 @@ def _nothing_usable(fixes: Fixes, raws: Sequence[RawFixes]) -> str:
     first = fixes.set_aside.iloc[0]
     cells = ", ".join(f"{name} {first[name]!r}" for name in _PLACE)
     return (
-        f"{files}: none of {len(fixes.set_aside)} rows is a usable fix ({reasons}); "
+        f"{files}: {_no_row(len(fixes.set_aside))} ({reasons}); "
         f"line {first['line']} reads {cells}: check the columns, the decimal mark and the delimiter"
     )
 
@@ -362,12 +362,19 @@ def _notes(raw: RawFixes, table: pd.DataFrame) -> list[str]:
         notes.append(f"{raw.file}: has no column of tags; its rows are tag {raw.stem!r}")
     usable = table[table["file"] == raw.file]
     if len(usable) == 0:
-        notes.append(f"{raw.file}: none of its {len(raw.lines)} rows is a usable fix")
+        notes.append(f"{raw.file}: {_no_row(len(raw.lines))}")
     stated = usable[_ELLIPSE].notna().sum(axis=1)
     partial = int(((stated > 0) & (stated < len(_ELLIPSE))).sum())
     if partial:
-        notes.append(f"{raw.file}: {partial} rows state a part of an ellipse; it is not used")
+        state = "1 row states" if partial == 1 else f"{partial} rows state"
+        notes.append(f"{raw.file}: {state} a part of an ellipse; it is not used")
     return notes
+
+
+def _no_row(count: int) -> str:
+    return (
+        "its only row is no usable fix" if count == 1 else f"none of {count} rows is a usable fix"
+    )
 
 
 def _order_notes(table: pd.DataFrame) -> list[str]:
@@ -376,4 +383,8 @@ def _order_notes(table: pd.DataFrame) -> list[str]:
     stamps = by_line["time"].astype("int64")
     latest = stamps.groupby([by_line["file"], by_line["tag"]]).cummax()
     late = by_line["file"][stamps < latest].value_counts(sort=False)
-    return [f"{f}: {n} rows were out of time order and were sorted" for f, n in late.items()]
+    return [
+        f"{file}: {'1 row was' if count == 1 else f'{count} rows were'} out of time order and "
+        "sorted"
+        for file, count in late.items()
+    ]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from functools import partial
 from pathlib import Path
 
@@ -12,7 +12,7 @@ from trackfit.criticism.tables import comparison_table, hold_out_table, judged_t
 from trackfit.inference.fit import Fit
 from trackfit.judgement import FixJudgement
 from trackfit.paths import FilledTrack
-from trackfit.report import Scene, figure_writers, file_stem, residual_figure, save_figure
+from trackfit.report import Scene, figure_writers, file_stems, residual_figure, save_figure
 from trackfit.results import (
     JUDGEMENT_FILE,
     RecordInfo,
@@ -34,10 +34,11 @@ def write_results(
 ) -> Path:
     """Write the results of a study to a folder, all at once, and return the folder.
 
-    Always `parameters.csv`, `set_aside.csv`, `fix_judgement.csv`, `responses.csv` and
-    `results.json`, `verdicts.csv` and the tables of the folder `fit`. With filled tracks also the
-    positions in the formats of `[output]` and the figures. Where the study asks for them,
-    `comparison.csv`, `hold_out.csv` and `hold_out_fixes.csv`.
+    Always `parameters.csv`, `set_aside.csv`, `fix_judgement.csv`, `verdicts.csv`, the tables of
+    the folder `fit` and `results.json`. `responses.csv` where a fitted tag has a preference term.
+    With filled tracks also the positions in the formats of `[output]`, and the figures unless the
+    study does without. Where the study asks for them, `comparison.csv`, `hold_out.csv` and
+    `hold_out_fixes.csv`.
 
     Parameters
     ----------
@@ -64,7 +65,8 @@ def write_results(
             on_path={(r.tag, r.term): r.on_path for r in responses},
             figure_format=output.figure_format,
         )
-        figures |= _residual_figures(judged, output.figure_format)
+        stems = file_stems(prepared.fixes.tags)
+        figures |= _residual_figures(judged, stems, output.figure_format)
     return write_folder(
         Path(folder),
         tracks=tracks,
@@ -96,7 +98,9 @@ def _judged_files(judged: Judged) -> dict[str, FileWriter]:
     return {name: partial(write_table, table=table) for name, table in tables.items()}
 
 
-def _residual_figures(judged: Judged, figure_format: str) -> dict[str, FileWriter]:
+def _residual_figures(
+    judged: Judged, stems: Mapping[str, str], figure_format: str
+) -> dict[str, FileWriter]:
     figures: dict[str, FileWriter] = {}
     for criticism in judged.criticisms:
         residuals = criticism.residuals
@@ -110,8 +114,9 @@ def _residual_figures(judged: Judged, figure_format: str) -> dict[str, FileWrite
             residuals.quantiles,
             residuals.of_ahead,
             residuals.of_left_out,
+            criticism.status,
         )
-        name = f"figures/residuals_{file_stem(criticism.tag)}.{figure_format}"
+        name = f"figures/residuals_{stems[criticism.tag]}.{figure_format}"
         figures[name] = partial(save_figure, draw)
     return figures
 

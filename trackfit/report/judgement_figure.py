@@ -60,7 +60,8 @@ def judgement_figure(judgement: JudgementLike, track: TrackLike, scene: Scene) -
     lonlat = table[["lon", "lat"]].to_numpy(float)
     frame = frame_of(track, lonlat[~flagged], scene.plane, None)
     size = frame.width / frame.height * _MAP_HEIGHT_IN + _PANEL_WIDTH_IN + _MARGINS_IN[0]
-    figure = style.new_figure(size, _MAP_HEIGHT_IN + _MARGINS_IN[1], _title(judgement))
+    height = _MAP_HEIGHT_IN + _MARGINS_IN[1]
+    figure = style.new_figure(size, height, _title(judgement), track.fit_status)
     grid = figure.add_gridspec(2, 2, width_ratios=[size - _PANEL_WIDTH_IN, _PANEL_WIDTH_IN])
     map_axes = figure.add_subplot(grid[:, 0])
     p_axes = figure.add_subplot(grid[0, 1])

@@ -37,7 +37,8 @@ def track_figure(
     used, aside = FixPoints.used(fixes), FixPoints.set_aside(set_aside)
     frame = frame_of(track, used.lonlat, scene.plane, scene.colony_lonlat)
     size = frame.width / frame.height * _MAP_HEIGHT_IN + _PANEL_WIDTH_IN + _MARGINS_IN[0]
-    figure = style.new_figure(size, _MAP_HEIGHT_IN + _MARGINS_IN[1], _title(track, used))
+    height = _MAP_HEIGHT_IN + _MARGINS_IN[1]
+    figure = style.new_figure(size, height, _title(track, used), track.fit_status)
     grid = figure.add_gridspec(2, 2, width_ratios=[size - _PANEL_WIDTH_IN, _PANEL_WIDTH_IN])
     map_axes = figure.add_subplot(grid[:, 0])
     lon_axes = figure.add_subplot(grid[0, 1])
