@@ -121,7 +121,9 @@ class FakeLibrary:
                 "role": ["estimated", "fixed"],
             }
         )
-        status = SimpleNamespace(ok=self.converged, sentence="The search stopped too early.")
+        status = SimpleNamespace(
+            ok=self.converged, name="STOPPED", sentence="The search stopped too early."
+        )
         moved = pd.DataFrame({"parameter": ["diffusion"], "change_in_sd": [0.0712]})
         return [
             SimpleNamespace(tag=t, parameters=table, status=status, step_check=check)
@@ -146,8 +148,11 @@ class FakeLibrary:
         criticisms = tuple(SimpleNamespace(tag=tag) for tag in ("A1", "B2"))
         return Judged(criticisms, verdicts, self.comparison, self.trial)
 
-    def fill_tracks(self, prepared: Any, fits: list[Any]) -> list[SimpleNamespace]:
+    def fill_tracks(
+        self, prepared: Any, fits: list[Any], progress: Callable[[str, float, str], None]
+    ) -> list[SimpleNamespace]:
         self.calls.append("fill_tracks")
+        progress("positions", 1.0, "2 tracks filled")
         return [SimpleNamespace(tag=fit.tag, warnings=()) for fit in fits]
 
     def write_results(
@@ -159,8 +164,10 @@ class FakeLibrary:
         *,
         judged: Judged,
         overwrite: bool,
+        progress: Callable[[str, float, str], None],
     ) -> Path:
         self.calls.append("write_results")
+        progress("figures", 1.0, "3 figures drawn")
         self.written = {
             "folder": folder,
             "filled": [track.tag for track in filled],
@@ -253,7 +260,7 @@ def test_a_fit_that_failed_ends_with_3_and_says_so_even_when_quiet(
     assert trackfit_cli.main(["fit", study, *flags]) == ExitCode.NOT_CONVERGED == 3
     out, err = capsys.readouterr()
     assert "A1: The search stopped too early." in err.splitlines()
-    assert "0 of 2 fits converged." in out.splitlines()
+    assert "0 of 2 fits converged; not A1 (STOPPED), B2 (STOPPED)." in out.splitlines()
     assert "write_results" in library.calls
 
 
@@ -442,7 +449,12 @@ def test_run_does_everything_and_prints_the_answer(
     assert re.search(r"^B2 error_scale +2 +fixed +1$", out, re.MULTILINE)
     assert re.search(r"^at half the step +change in sd\nA1 diffusion +\+0\.07$", out, re.MULTILINE)
     assert out.endswith(f"\n2 of 2 fits converged.\nResults: {folder}\n")
-    assert err.splitlines()[2:] == ["A1: fitted", "B2: fitted"]
+    assert err.splitlines()[2:] == [
+        "A1: fitted",
+        "B2: fitted",
+        "positions: 2 tracks filled",
+        "figures: 3 figures drawn",
+    ]
 
 
 def test_fit_fills_nothing(library: FakeLibrary, study: str) -> None:

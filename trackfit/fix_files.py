@@ -22,6 +22,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
+from trackfit.counted import counted
 from trackfit.faults import FixesError
 
 COLUMNS = (
@@ -222,7 +223,7 @@ class _Rows:
         if not self._long_lines:
             return ()
         count, first = len(self._long_lines), self._long_lines[0]
-        runs = "1 row runs" if count == 1 else f"{count} rows run"
+        runs = counted(count, "row runs", "rows run")
         where = "from line" if count == 1 else "the first from line"
         return (f"{file}: {runs} over several lines inside quotation marks, {where} {first}",)
 

@@ -16,6 +16,7 @@ import pandas as pd
 import pyarrow as pa
 import pyarrow.compute as pc
 
+from trackfit.counted import counted
 from trackfit.faults import FixesError
 from trackfit.fix_files import COLUMNS, RawFixes, nearest, read_raw
 
@@ -366,7 +367,7 @@ def _notes(raw: RawFixes, table: pd.DataFrame) -> list[str]:
     stated = usable[_ELLIPSE].notna().sum(axis=1)
     partial = int(((stated > 0) & (stated < len(_ELLIPSE))).sum())
     if partial:
-        state = "1 row states" if partial == 1 else f"{partial} rows state"
+        state = counted(partial, "row states", "rows state")
         notes.append(f"{raw.file}: {state} a part of an ellipse; it is not used")
     return notes
 
@@ -384,7 +385,6 @@ def _order_notes(table: pd.DataFrame) -> list[str]:
     latest = stamps.groupby([by_line["file"], by_line["tag"]]).cummax()
     late = by_line["file"][stamps < latest].value_counts(sort=False)
     return [
-        f"{file}: {'1 row was' if count == 1 else f'{count} rows were'} out of time order and "
-        "sorted"
+        f"{file}: {counted(count, 'row was', 'rows were')} out of time order and were sorted"
         for file, count in late.items()
     ]

@@ -6,7 +6,8 @@ from collections.abc import Mapping, Sequence
 from functools import partial
 from pathlib import Path
 
-from trackfit.analysis import Prepared, fix_judgements, preference_responses
+from trackfit.analysis import Prepared, TagProgress, fix_judgements, preference_responses
+from trackfit.counted import counted
 from trackfit.criticism.judged import Judged, judge_fits
 from trackfit.criticism.tables import comparison_table, hold_out_table, judged_tables
 from trackfit.inference.fit import Fit
@@ -23,6 +24,10 @@ from trackfit.results import (
 from trackfit.results.write import FileWriter
 
 
+def _silent(what: str, done: float, message: str) -> None:
+    """Take no notice of progress."""
+
+
 def write_results(
     folder: Path | str,
     prepared: Prepared,
@@ -31,6 +36,7 @@ def write_results(
     *,
     judged: Judged | None = None,
     overwrite: bool = False,
+    progress: TagProgress = _silent,
 ) -> Path:
     """Write the results of a study to a folder, all at once, and return the folder.
 
@@ -44,6 +50,8 @@ def write_results(
     ----------
     judged
         What was found out about the fits (`judge_fits`); found out now if it is not given.
+    progress
+        Told of every figure drawn.
 
     Raises
     ------
@@ -78,10 +86,25 @@ def write_results(
         extra_files={
             JUDGEMENT_FILE: partial(_write_judgements, judgements),
             **_judged_files(judged),
-            **figures,
+            **_told(figures, progress),
         },
         overwrite=overwrite,
     )
+
+
+def _told(figures: Mapping[str, FileWriter], progress: TagProgress) -> dict[str, FileWriter]:
+    """The same writers; each says when it has drawn its figure."""
+
+    def write(number: int, writer: FileWriter, path: Path) -> None:
+        writer(path)
+        last = number == len(figures)
+        words = f"{counted(number, 'figure')} drawn" if last else path.name
+        progress("figures", number / len(figures), words)
+
+    return {
+        name: partial(write, number, writer)
+        for number, (name, writer) in enumerate(figures.items(), 1)
+    }
 
 
 def _write_judgements(judgements: Sequence[FixJudgement], path: Path) -> None:

@@ -8,6 +8,7 @@ from jaxtyping import Float
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
+from trackfit.counted import counted
 from trackfit.report import style
 from trackfit.report.map_panel import (
     HALO,
@@ -170,6 +171,6 @@ def _dress_p_values(axes: Axes, p_value: Float[np.ndarray, " n"], limit: float) 
 
 def _note_hidden(figure: Figure, count: int) -> None:
     if count:
-        text = f"{count} flagged fix{'es' * (count != 1)} beyond the map"
+        text = f"{counted(count, 'flagged fix', 'flagged fixes')} beyond the map"
         height = style.FOOTER_IN / figure.get_figheight() / 2
         figure.text(0.988, height, text, ha="right", va="center", color=style.GREY, fontsize=7.5)

@@ -8,6 +8,7 @@ from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.ticker import MaxNLocator
 
+from trackfit.counted import counted
 from trackfit.criticism.residuals import Autocorrelation, Quantiles
 from trackfit.report import style
 from trackfit.results.inputs import StatusLike
@@ -43,7 +44,7 @@ def residual_figure(
     status
         How the fit ended; one that failed is told below the title.
     """
-    words = f"Tag {tag}: residuals of {len(hours)} fixes"
+    words = f"Tag {tag}: residuals of {counted(len(hours), 'fix', 'fixes')}"
     figure = style.new_figure(*_SIZE_IN, words, status)
     grid = figure.subplots(2, 2, width_ratios=(1.0, 1.35))
     _draw_quantiles(grid[0, 0], quantiles)
