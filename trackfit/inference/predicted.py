@@ -8,7 +8,6 @@ as N(m, V + s^2 C), or with heavy tails as the mixture of N(m, V + s^2 C / w) ov
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Self
 
 import numpy as np
 from jaxtyping import Float
@@ -52,7 +51,7 @@ class Predicted:
         covariance_km2: Float[np.ndarray, "fixes 2 2"],
         error_km2: Float[np.ndarray, "fixes 2 2"],
         log_nu: float | None,
-    ) -> Self:
+    ) -> "Predicted":
         """Compare reported positions with predictions of the true ones.
 
         Parameters
