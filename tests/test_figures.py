@@ -24,6 +24,7 @@ from trackfit.report import (
     track_figure,
 )
 from trackfit.report.map_panel import ELLIPSES_SHOWN, round_length_km
+from trackfit.report.style import with_unit
 from trackfit.report.time_panels import wrapped_degrees
 
 PNG = b"\x89PNG\r\n\x1a\n"
@@ -179,7 +180,7 @@ def test_bands_hold_their_share_of_each_coordinate():
     figure = track_figure(straight, empty.table, empty.set_aside, Scene(plane_of(track)))
     band = next(
         c for c in figure.axes[2].collections
-        if isinstance(c, PolyCollection) and c.get_label() == "95 % band"
+        if isinstance(c, PolyCollection) and c.get_label() == "_95 % band"
     )  # fmt: skip
     vertices = band.get_paths()[0].vertices
     first = vertices[vertices[:, 0] == vertices[:, 0].min(), 1]
@@ -315,6 +316,37 @@ def test_a_fit_that_failed_is_told_and_does_not_set_the_axis():
     assert figure.axes[0].get_ylim()[1] < 20.0
     together = response_figure([responses[:2]])
     assert [t.get_text() for t in together.legends[0].get_texts()] == ["t0 (stuck)", "t1"]
+
+
+def test_panels_fill_their_rows():
+    for tags, rows in ((5, [3, 2]), (6, [3, 3]), (8, [4, 4]), (9, [3, 3, 3])):
+        page = response_pages(many_responses(tags, 1))[0]
+        figure = response_figure(page.panels, alike=page.alike)
+        tops = [round(axes.get_position().y1, 3) for axes in figure.axes]
+        assert [tops.count(top) for top in sorted(set(tops), reverse=True)] == rows
+
+
+@pytest.mark.parametrize(
+    ("unit", "label"),
+    [("degC", "x (°C)"), ("km^2", "x (km²)"), ("m", "x (m)"), ("1", "x"), ("", "x")],
+)
+def test_units_are_written_as_people_do(unit, label):
+    assert with_unit("x", unit) == label
+
+
+def test_the_point_of_the_study_has_its_own_name_on_the_map():
+    track = wandering_track(hours=30)
+    scene = dataclasses.replace(surroundings(track), colony_name="haul-out $1")
+    labels = drawn(track, scene).axes[0].get_legend_handles_labels()[1]
+    assert r"haul-out \$1" in labels
+
+
+def test_the_legend_shows_the_bands_as_they_are_seen():
+    """The 50 % band lies over the 95 % band: its own 0.40 on 0.22 covers 1 - 0.6 x 0.78 = 0.532."""
+    axes = drawn(wandering_track(hours=30)).axes[2]
+    shown = dict(zip(*reversed(axes.get_legend_handles_labels()), strict=True))
+    assert shown["95 % band"].get_alpha() == pytest.approx(0.22)
+    assert shown["50 % band"].get_alpha() == pytest.approx(0.532)
 
 
 def test_track_figures_tell_of_a_fit_that_failed():

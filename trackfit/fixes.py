@@ -72,7 +72,7 @@ class Fixes:
         return self.table[self.table["tag"] == tag].reset_index(drop=True)
 
     def setting_aside(
-        self, mask: Collection[Any], reason: str, shown: Collection[str] | None = None
+        self, mask: Collection[Any], reason: str, shown: Collection[Any] | None = None
     ) -> "Fixes":
         """Move rows of `table` to `set_aside`.
 
@@ -86,7 +86,8 @@ class Fixes:
         reason
             The rule; no colon in it.
         shown
-            What breaks the rule, to follow it after a colon, (len(table),).
+            Texts of what breaks the rule, to follow it after a colon, (len(table),); of rows that
+            stay, anything.
         """
         moves = np.asarray(mask, dtype=bool)
         if moves.shape != (len(self.table),):

@@ -149,12 +149,14 @@ def _scene(prepared: Prepared) -> Scene:
     depth = next(
         (layer for name, layer in prepared.layers.items() if "depth" in name.lower()), None
     )
-    point = next((p.point for p in prepared.study.preference if p.point), None)
+    named = next((p for p in prepared.study.preference if p.point), None)
+    point = named.point if named else None
     return Scene(
         plane=prepared.plane,
         coast=prepared.coast,
         depth=depth,
         colony_lonlat=None if point is None else (point.lon, point.lat),
+        colony_name=named.term if named else "",
     )
 
 

@@ -20,7 +20,7 @@ from dataclasses import dataclass
 
 import jax.numpy as jnp
 import numpy as np
-from jaxtyping import Float
+from jaxtyping import Float, Int
 
 from trackfit.inference.banded import Cholesky, NotPositiveDefinite, factor, reversed_band
 from trackfit.inference.derivatives import (
@@ -90,7 +90,7 @@ class Spread:
     steps: StepSpread
     adjoint: Float[np.ndarray, "states dim"]
 
-    def covariance_at(self, states: Float[np.ndarray, " n"]) -> Float[np.ndarray, "n 2 2"]:
+    def covariance_at(self, states: Int[np.ndarray, " n"]) -> Float[np.ndarray, "n 2 2"]:
         """Covariance of the position at some states."""
         return np.moveaxis(np.asarray(self.steps.covariance[:2, :2, states]), -1, 0)
 

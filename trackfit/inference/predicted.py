@@ -8,6 +8,7 @@ as N(m, V + s^2 C), or with heavy tails as the mixture of N(m, V + s^2 C / w) ov
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 from jaxtyping import Float
@@ -16,6 +17,9 @@ from scipy.special import logsumexp
 from trackfit.inference.observations import LOG_2PI
 from trackfit.inference.sites import determinant, inverse_2x2
 from trackfit.inference.tails import weight_nodes
+
+# typing.Self cannot be checked at run time where methods are checked one by one
+Kind = TypeVar("Kind", bound="Predicted")
 
 
 @dataclass(frozen=True)
@@ -46,12 +50,12 @@ class Predicted:
 
     @classmethod
     def of(
-        cls,
+        cls: type[Kind],
         offset_km: Float[np.ndarray, "fixes 2"],
         covariance_km2: Float[np.ndarray, "fixes 2 2"],
         error_km2: Float[np.ndarray, "fixes 2 2"],
         log_nu: float | None,
-    ) -> "Predicted":
+    ) -> Kind:
         """Compare reported positions with predictions of the true ones.
 
         Parameters

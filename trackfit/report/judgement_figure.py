@@ -7,6 +7,7 @@ import pandas as pd
 from jaxtyping import Float
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.ticker import FuncFormatter
 
 from trackfit.counted import counted
 from trackfit.report import style
@@ -156,6 +157,7 @@ def _draw_against_time(
         label="95 % below if errors are normal",
     )
     offset_axes.set(title="Distance from where the others place it", ylabel="distance (km)")
+    offset_axes.yaxis.set_major_formatter(FuncFormatter(lambda km, _: f"{km:g}"))
     share_time_axis(p_axes, offset_axes)
     margin = max(0.02 * (time[-1] - time[0]), 1 / 48)
     p_axes.set_xlim(time[0] - margin, time[-1] + margin)

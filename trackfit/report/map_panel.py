@@ -145,15 +145,16 @@ def _draw_contours(axes: Axes, frame: Frame, layer: Layer) -> None:
         linestyles="solid", zorder=1,
     )  # fmt: skip
     labels = axes.clabel(
-        lines, fontsize=7, fmt="%g", colors="#4F6B7A", inline_spacing=3, zorder=1.5
+        lines, fontsize=7, fmt="%g", colors="#4F6B7A", inline_spacing=3, zorder=6.5
     )
     for label in labels:
+        label.set_path_effects(HALO)
         at = (np.array(label.get_position()) - [frame.x_min, frame.y_min]) / [
             frame.width,
             frame.height,
         ]
         label.set_visible(bool(((at > 0.04) & (at < 0.96)).all()))
-    text = style.as_plain_text(f"{layer.name} ({layer.unit})")
+    text = style.with_unit(layer.name, layer.unit)
     axes.add_line(Line2D([], [], color=style.CONTOUR, linewidth=0.9, label=text))
 
 
@@ -260,7 +261,8 @@ def _draw_ends(axes: Axes, path: Float[np.ndarray, "n 2"], scene: Scene) -> None
     if scene.colony_lonlat is not None:
         lon, lat = (np.array([value]) for value in scene.colony_lonlat)
         x, y = scene.plane.to_plane(lon, lat)[0]
-        axes.scatter(x, y, marker="^", s=64, color=style.ORANGE, label="colony", **edge)
+        label = style.as_plain_text(scene.colony_name)
+        axes.scatter(x, y, marker="^", s=64, color=style.ORANGE, label=label, **edge)
 
 
 def draw_scale_bar(axes: Axes, frame: Frame, busy: Float[np.ndarray, "n 2"]) -> None:

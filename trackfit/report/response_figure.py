@@ -93,8 +93,8 @@ def response_figure(
         Responses that set the axis of the preference for all panels; each sets its own if none.
         Fits that failed do not count where others converged.
     """
-    columns = min(len(panels), _COLUMNS)
-    rows = -(-len(panels) // columns)
+    rows = -(-len(panels) // _COLUMNS)
+    columns = -(-len(panels) // rows)
     alone = len({r.term for panel in panels for r in panel}) == 1 and len(panels) > 1
     tags = {r.tag for panel in panels for r in panel}
     whose = f" of tag {next(iter(tags))}" if len(tags) == 1 else ""
@@ -139,8 +139,7 @@ def _draw_panel(
         band.set(alpha=0.18, linewidth=0, zorder=2)
         axes.plot(response.at, response.h, color=colour, linestyle=line, label=tag, zorder=3)
         _rug(axes, on_path.get((response.tag, response.term)), foot + (number + 1) * room, colour)
-    unit = panel[0].unit
-    axes.set_xlabel(style.as_plain_text(f"{panel[0].layer} ({unit})" if unit else panel[0].layer))
+    axes.set_xlabel(style.with_unit(panel[0].layer, panel[0].unit))
     axes.set_ylabel("preference h (km\N{SUPERSCRIPT TWO}/h)")
     axes.xaxis.set_major_locator(MaxNLocator(5))
     axes.yaxis.set_major_locator(MaxNLocator(6))

@@ -139,6 +139,29 @@ def _keep_clear_below(figure: Figure, artist: Artist) -> None:
     figure.set_layout_engine("constrained", rect=(0.005, share, 0.99, 1 - share - 0.005))
 
 
+def with_unit(name: str, unit: str) -> str:
+    """Return a label as people write units: degC as °C, m^2 as m².
+
+    Examples
+    --------
+    >>> with_unit("temperature", "degC"), with_unit("slope", "1"), with_unit("area", "km^2")
+    ('temperature (°C)', 'slope', 'area (km²)')
+    """
+    if unit in ("", "1", "none"):
+        return as_plain_text(name)
+    for written, shown in _UNITS:
+        unit = unit.replace(written, shown)
+    return as_plain_text(f"{name} ({unit})")
+
+
+_UNITS = (
+    ("degC", "°C"),
+    ("degree_Celsius", "°C"),
+    ("^2", "²"),
+    ("^3", "³"),
+)
+
+
 def as_plain_text(text: str) -> str:
     """Return a text that a figure shows as it is: a dollar sign starts no formula."""
     return text.replace("$", r"\$")
