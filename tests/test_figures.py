@@ -1,4 +1,5 @@
 import dataclasses
+import re
 
 import matplotlib as mpl
 import numpy as np
@@ -157,6 +158,21 @@ def test_a_full_scene_is_tidy_and_shows_everything():
     inside = [t.get_text() for t in figure.axes[0].texts if t.get_visible()]
     assert any(text.endswith(" km") for text in inside)
     assert any(text.lstrip("-\N{MINUS SIGN}").isdigit() for text in inside)
+
+
+def test_labels_of_contours_keep_off_the_path_and_the_scale_bar():
+    track = wandering_track(hours=96)
+    scene = surroundings(track)
+    axes = drawn(track, scene).axes[0]
+    numbers = [text for text in axes.texts if re.fullmatch(r"[−-]?\d+", text.get_text())]
+    (bar,) = [text for text in axes.texts if text.get_text().endswith(" km")]
+    assert numbers
+    path = scene.plane.to_plane(track.table["lon"].to_numpy(), track.table["lat"].to_numpy())
+    width = np.ptp(axes.get_xlim())
+    for text in numbers:
+        # a label is put at a vertex of its contour and may slide along it by a part of its length
+        assert np.hypot(*(path - text.get_position()).T).min() > 0.025 * width
+        assert not text.get_window_extent().overlaps(bar.get_window_extent())
 
 
 def test_gap_steps_are_dashed_and_the_gap_is_shaded():

@@ -97,7 +97,7 @@ def _draw_map(axes: Axes, frame: Frame, table: pd.DataFrame, track: TrackLike, s
         )
     )
     flagged = table["flagged"].to_numpy(bool)
-    draw_ground(axes, frame, scene)
+    draw_ground(axes, frame, scene, path)
     draw_path(axes, path, track.table["in_gap"].to_numpy(bool))
     if not flagged.all():
         marks = fix_marks(int((~flagged).sum()))
