@@ -10,7 +10,7 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from jaxtyping import Float, Int
+from jaxtyping import Bool, Float, Int
 from scipy.linalg import lapack
 
 
@@ -33,6 +33,14 @@ class Cholesky(NamedTuple):
     ) -> Float[np.ndarray, " *size_and_columns"]:
         """Solve L L' x = right."""
         solution, info = lapack.dpbtrs(self.storage, right, lower=1)
+        _check(info)
+        return solution.reshape(right.shape)
+
+    def solve_factor(
+        self, right: Float[np.ndarray, " *size_and_columns"]
+    ) -> Float[np.ndarray, " *size_and_columns"]:
+        """Solve L x = right."""
+        solution, info = lapack.dtbtrs(self.storage, right, uplo="L", trans="N")
         _check(info)
         return solution.reshape(right.shape)
 
@@ -80,6 +88,32 @@ def reversed_band(band: Float[np.ndarray, "n dim 2*dim"]) -> Float[np.ndarray, "
     return turned.reshape(n, dim, width)
 
 
+def with_held(
+    band: Float[np.ndarray, "n dim 2*dim"], held: Bool[np.ndarray, "n dim"]
+) -> Float[np.ndarray, "n dim 2*dim"]:
+    """The matrix of the free components; held ones stand alone with a one on the diagonal."""
+    flat, fixed = band.reshape(-1, band.shape[2]).copy(), held.ravel()
+    flat[fixed] = 0.0
+    flat[fixed, 0] = 1.0
+    for below in range(1, min(flat.shape[1], len(flat))):
+        flat[: len(flat) - below, below][fixed[below:]] = 0.0
+    return flat.reshape(band.shape)
+
+
+def times_band(
+    band: Float[np.ndarray, "n dim 2*dim"], x: Float[np.ndarray, "rows n*dim"]
+) -> Float[np.ndarray, "rows n*dim"]:
+    """The matrix times each row of x."""
+    flat = band.reshape(-1, band.shape[2])
+    size = len(flat)
+    result = x * flat[:, 0]
+    for below in range(1, min(flat.shape[1], size)):
+        column = flat[: size - below, below]
+        result[:, below:] += x[:, : size - below] * column
+        result[:, : size - below] += x[:, below:] * column
+    return result
+
+
 def dense(band: Float[np.ndarray, "n dim 2*dim"]) -> Float[np.ndarray, "n*dim n*dim"]:
     """The full symmetric matrix; for small problems and tests."""
     n, dim, width = band.shape
@@ -91,6 +125,31 @@ def dense(band: Float[np.ndarray, "n dim 2*dim"]) -> Float[np.ndarray, "n*dim n*
         matrix[columns + below, columns] = flat[: size - below, below]
         matrix[columns, columns + below] = flat[: size - below, below]
     return matrix
+
+
+def split(
+    band: Float[np.ndarray, "n dim 2*dim"],
+) -> tuple[Float[np.ndarray, "n dim dim"], Float[np.ndarray, "n-1 dim dim"]]:
+    """Diagonal blocks, and the blocks below them."""
+    n, dim, _ = band.shape
+    lower = lower_triangles(band)
+    below = np.empty((n - 1, dim, dim))
+    for c in range(dim):
+        below[:, :, c] = band[:-1, c, dim - c : 2 * dim - c]
+        lower[:, c, c + 1 :] = lower[:, c + 1 :, c]
+    return lower, below
+
+
+def joined(
+    diagonal: Float[np.ndarray, "n dim dim"], below: Float[np.ndarray, "n-1 dim dim"]
+) -> Float[np.ndarray, "n dim 2*dim"]:
+    """Banded storage from diagonal blocks and the blocks below them."""
+    n, dim, _ = diagonal.shape
+    band = np.zeros((n, dim, 2 * dim))
+    for c in range(dim):
+        band[:, c, : dim - c] = diagonal[:, c:, c]
+        band[:-1, c, dim - c : 2 * dim - c] = below[:, :, c]
+    return band
 
 
 def block_covariances(
@@ -107,16 +166,17 @@ def block_covariances(
     Fraser & Potter 1969, IEEE Trans. Autom. Control 14:387).
     """
     n, dim, width = band.shape
-    before = _lower_triangles(forward.storage.T.reshape(n, dim, width)[at])
-    after = _lower_triangles(backward.storage.T.reshape(n, dim, width)[n - 1 - at])
-    own = _lower_triangles(band[at])
+    before = lower_triangles(forward.storage.T.reshape(n, dim, width)[at])
+    after = lower_triangles(backward.storage.T.reshape(n, dim, width)[n - 1 - at])
+    own = lower_triangles(band[at])
     own = own + np.swapaxes(np.tril(own, -1), 1, 2)
     before = before @ np.swapaxes(before, 1, 2)
     after = (after @ np.swapaxes(after, 1, 2))[:, ::-1, ::-1]
     return np.linalg.inv(before + after - own)
 
 
-def _lower_triangles(columns: Float[np.ndarray, "k dim width"]) -> Float[np.ndarray, "k dim dim"]:
+def lower_triangles(columns: Float[np.ndarray, "k dim width"]) -> Float[np.ndarray, "k dim dim"]:
+    """Lower triangles of the diagonal blocks of a matrix in banded storage."""
     dim = columns.shape[1]
     lower = np.zeros((len(columns), dim, dim))
     for c in range(dim):

@@ -25,7 +25,7 @@ from typing import NamedTuple, Protocol, runtime_checkable
 import numpy as np
 from jaxtyping import Bool, Float, Int
 
-from trackfit.inference.banded import Cholesky, factor
+from trackfit.inference.banded import Cholesky, factor, times_band, with_held
 
 MAX_SHRINKS = 10
 """Tries of a block: after so many the bracket is a few thousandths of a turn."""
@@ -121,7 +121,7 @@ class Conditional:
         for group in np.unique(paths.group):
             band = paths.bands[group]
             rows = np.flatnonzero(paths.group == group)
-            parts.append(_Part(rows, band, factor(_with_held(band, held))))
+            parts.append(_Part(rows, band, factor(with_held(band, held))))
         return cls(held, tuple(parts))
 
     def mean(
@@ -130,7 +130,7 @@ class Conditional:
         """Mean of the free deviations given the held ones, which are returned as they are."""
         kept = (deviation * self.held).reshape(len(deviation), -1)
         for part in self.parts:
-            push = _times_band(part.band, kept[part.rows])
+            push = times_band(part.band, kept[part.rows])
             push[:, self.held.ravel()] = 0.0
             kept[part.rows] -= part.cholesky.solve(push.T).T
         return kept.reshape(deviation.shape)
@@ -142,31 +142,6 @@ class Conditional:
         for part in self.parts:
             flat[part.rows] = part.cholesky.solve_transposed_factor(flat[part.rows].T).T
         return white
-
-
-def _with_held(
-    band: Float[np.ndarray, "states dim 2*dim"], held: Bool[np.ndarray, "states dim"]
-) -> Float[np.ndarray, "states dim 2*dim"]:
-    """The precision of the free components; held ones stand alone with a one on the diagonal."""
-    flat, fixed = band.reshape(-1, band.shape[2]).copy(), held.ravel()
-    flat[fixed] = 0.0
-    flat[fixed, 0] = 1.0
-    for below in range(1, min(flat.shape[1], len(flat))):
-        flat[: len(flat) - below, below][fixed[below:]] = 0.0
-    return flat.reshape(band.shape)
-
-
-def _times_band(
-    band: Float[np.ndarray, "states dim 2*dim"], x: Float[np.ndarray, "paths size"]
-) -> Float[np.ndarray, "paths size"]:
-    flat = band.reshape(-1, band.shape[2])
-    size = len(flat)
-    result = x * flat[:, 0]
-    for below in range(1, min(flat.shape[1], size)):
-        column = flat[: size - below, below]
-        result[:, below:] += x[:, : size - below] * column
-        result[:, : size - below] += x[:, below:] * column
-    return result
 
 
 @dataclass(frozen=True)

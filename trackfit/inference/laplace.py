@@ -33,6 +33,7 @@ from trackfit.inference.derivatives import (
 from trackfit.inference.observations import Sites
 from trackfit.inference.problem import Point, TrackProblem, evaluate_at
 from trackfit.inference.process import ProcessParameters
+from trackfit.motion.velocity import Basis
 
 MAX_NEWTON = 60
 DECREMENT_TOLERANCE = 1e-8
@@ -92,7 +93,7 @@ class Spread:
 
     def covariance_at(self, states: Int[np.ndarray, " n"]) -> Float[np.ndarray, "n 2 2"]:
         """Covariance of the position at some states."""
-        return np.moveaxis(np.asarray(self.steps.covariance[:2, :2, states]), -1, 0)
+        return np.moveaxis(np.asarray(self.steps.covariance)[:2, :2, states], -1, 0)
 
 
 def find_mode(
@@ -101,15 +102,18 @@ def find_mode(
     sites: Sites,
     start: Float[np.ndarray, "states dim"],
     tolerance: float = DECREMENT_TOLERANCE,
+    basis: Basis | None = None,
 ) -> Mode:
     """Newton's method with a line search; Gauss-Newton where the Hessian is not positive definite.
+
+    `basis` is the field's at the start, where it is known.
 
     Raises
     ------
     ModeNotFound
         The density is not finite, the line search fails or the Hessian at the end is indefinite.
     """
-    point = evaluate_at(problem, theta, start)
+    point = evaluate_at(problem, theta, start, basis)
     if not np.isfinite(point.value):
         raise ModeNotFound("the density is not finite at the start")
     patience = Patience()
@@ -187,14 +191,16 @@ def spread_around(
 
 def _padded(problem: TrackProblem, columns: Float[np.ndarray, "states dim width"]) -> jnp.ndarray:
     """Banded columns with an identity for the states of the padding."""
-    fill = np.zeros((problem.padded - problem.n_states, *columns.shape[1:]))
-    fill[:, :, 0] = 1.0
-    return jnp.asarray(np.concatenate([columns, fill]))
+    padded = np.zeros((problem.padded, *columns.shape[1:]))
+    padded[: problem.n_states] = columns
+    padded[problem.n_states :, :, 0] = 1.0
+    return jnp.asarray(padded)
 
 
 def process_gradient(problem: TrackProblem, mode: Mode, spread: Spread) -> ProcessParameters:
     """Gradient of the Laplace marginal likelihood (negative log) in the process parameters."""
-    adjoint = jnp.zeros_like(mode.point.z).at[:, : problem.n_states].set(spread.adjoint.T)
+    adjoint = np.zeros((problem.dim, problem.padded))
+    adjoint[:, : problem.n_states] = spread.adjoint.T
     return parameter_gradient(
         problem.motion,
         problem.process_parameters(mode.theta),
@@ -202,7 +208,7 @@ def process_gradient(problem: TrackProblem, mode: Mode, spread: Spread) -> Proce
         mode.point.basis,
         problem.track,
         spread.steps,
-        adjoint,
+        jnp.asarray(adjoint),
     )
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Self
 
 import numpy as np
 from jaxtyping import Float
@@ -27,31 +28,38 @@ from trackfit.inference.laplace import (
     process_gradient,
     spread_around,
 )
-from trackfit.inference.observations import Sites
+from trackfit.inference.observations import Observations, Sites
 from trackfit.inference.problem import Point, TrackProblem, evaluate_at
+from trackfit.inference.reduced import Reduced
 from trackfit.inference.sites import (
     Cavity,
     SiteMixer,
     cavities,
+    inverse_2x2,
     log_site_mass,
     matched_sites,
     starting_sites,
     tilted,
 )
 from trackfit.inference.tails import Tilted
+from trackfit.motion.velocity import Basis
 
 MAX_ROUNDS = 60
-SWEEPS_PER_ROUND = 4
+SWEEPS_PER_ROUND = 12
 SITE_TOLERANCE = 1e-6
 """Sites have settled where no marginal moment would move by more than this share of its sd."""
 
 
 @dataclass(frozen=True)
 class Warm:
-    """Where an approximation starts: states, and sites where tails are heavy."""
+    """Where an approximation starts: states, and sites where tails are heavy.
+
+    `basis` is the field's at the states where it is known: layers are then not asked again.
+    """
 
     states: Float[np.ndarray, "states dim"]
     sites: Sites | None = None
+    basis: Basis | None = None
 
 
 @dataclass(frozen=True)
@@ -76,7 +84,8 @@ class Approximation:
     @property
     def warm(self) -> Warm:
         """A start for nearby parameters."""
-        return Warm(self.mode.states, self.mode.sites if self.problem.observations.heavy else None)
+        sites = self.mode.sites if self.problem.observations.heavy else None
+        return Warm(self.mode.states, sites, self.mode.point.basis)
 
     @cached_property
     def spread(self) -> Spread:
@@ -136,7 +145,7 @@ def approximate(
     observations = problem.observations
     if not observations.heavy:
         sites = observations.gaussian_sites(problem.error_parameters(theta)[0])
-        mode = find_mode(problem, theta, sites, warm.states, tolerance)
+        mode = find_mode(problem, theta, sites, warm.states, tolerance, warm.basis)
         return Approximation(problem, mode, None, None, None, 0)
     try:
         return _propagate(problem, theta, warm, tolerance, site_tolerance)
@@ -144,33 +153,73 @@ def approximate(
         raise ModeNotFound("a site's moments are not finite or not positive definite") from None
 
 
-@dataclass
+@dataclass(frozen=True)
 class _Linear:
-    """The process linearised at a point, so that sweeps over the sites need only banded algebra."""
+    """The process linearised at a point, at the states with fixes: all that sweeps of sites need.
 
-    problem: TrackProblem
-    point: Point
-    adjoint: Float[np.ndarray, "states dim"]
-    exact: bool
+    `own` is the adjoint at the fixes' states.
+    """
 
-    def solved(self, sites: Sites) -> tuple[Cholesky, np.ndarray, np.ndarray, np.ndarray]:
-        """Factor, Newton step, and the moments of e = x - y at the fixes' states."""
-        problem, at = self.problem, self.problem.observations.state
-        band = self.point.band(problem, sites, exact=self.exact)
-        cholesky, backward = factor(band), factor(reversed_band(band))
-        gradient = self.point.full_gradient(problem, sites)
+    observations: Observations
+    states: Float[np.ndarray, "kept dim"]
+    reduced: Reduced
+    own: Float[np.ndarray, "fixes 2"]
+
+    @classmethod
+    def at(cls, problem: TrackProblem, point: Point, spread: Spread, *, exact: bool) -> Self:
+        """Integrate out the states without fixes; they have a Gaussian of their own."""
+        seen, observations = problem.observations.seen
+        none = Sites.none(len(observations.state))
+        band = point.band(problem, none, exact=exact)
+        try:
+            reduced = Reduced.of(band, point.gradient, seen)
+        except NotPositiveDefinite:
+            raise ModeNotFound("the Hessian between fixes is indefinite") from None
+        own = spread.adjoint[problem.observations.state, :2]
+        return cls(observations, point.states[seen], reduced, own)
+
+    def factored(self, sites: Sites) -> tuple[Float[np.ndarray, "kept dim 2*dim"], Cholesky]:
+        """The precision with sites, and its factor."""
+        band = self.reduced.band.copy()
+        self.observations.add_information(sites, band)
+        return band, factor(band)
+
+    def marginals(
+        self, sites: Sites, band: Float[np.ndarray, "kept dim 2*dim"], cholesky: Cholesky
+    ) -> tuple[float, np.ndarray, np.ndarray]:
+        """The Newton decrement of all states, and moments of e = x - y at the fixes' states."""
+        gradient = self.reduced.gradient.copy()
+        self.observations.add_gradient(sites, self.states, gradient)
         step = -cholesky.solve(gradient.reshape(-1)).reshape(gradient.shape)
-        own = self.adjoint[at, :2]
-        mean = problem.observations.offset(self.point.states) + step[at, :2] + own
+        decrement = self.reduced.gained - float(np.sum(gradient * step))
+        at = self.observations.state
+        mean = self.observations.offset(self.states) + step[at, :2] + self.own
+        try:
+            backward = factor(reversed_band(band))
+        except NotPositiveDefinite:
+            raise ModeNotFound("the Hessian cannot be factored in reverse") from None
         covariance = block_covariances(band, cholesky, backward, at)[:, :2, :2]
-        return cholesky, step, mean, less_square(covariance, own)
+        return decrement, mean, less_square(covariance, self.own)
+
+    def towards(
+        self, sites: Sites, wanted: Sites
+    ) -> tuple[Sites, Float[np.ndarray, "kept dim 2*dim"], Cholesky]:
+        """The wanted sites, or as far on the way to them as the Hessian stays positive."""
+        share = 1.0
+        for _ in range(12):
+            trial = sites.mixed(wanted, share)
+            try:
+                return trial, *self.factored(trial)
+            except NotPositiveDefinite:
+                share *= 0.5
+        raise ModeNotFound("no change of the sites keeps the Hessian positive definite")
 
 
 def less_square(
     covariance: Float[np.ndarray, "n 2 2"], by: Float[np.ndarray, "n 2"]
 ) -> Float[np.ndarray, "n 2 2"]:
     """V - a a', or V - a a'/(1 + a' inv(V) a) where a is too long for that to be positive."""
-    length = np.einsum("na,nab,nb->n", by, np.linalg.inv(covariance), by)
+    length = np.einsum("na,nab,nb->n", by, inverse_2x2(covariance), by)
     share = np.where(length < 0.5, 1.0, 1.0 / (1.0 + length))
     return covariance - share[:, None, None] * by[:, :, None] * by[:, None, :]
 
@@ -182,49 +231,60 @@ def _propagate(
     tolerance: float,
     site_tolerance: float,
 ) -> Approximation:
-    """Rounds of: linearise the process; sweep the sites; take the Newton step."""
+    """Rounds of: linearise the process; sweep the sites; take the Newton step.
+
+    Around one point sites are swept until they move the marginals less than the step due will.
+    """
     observations = problem.observations
     log_scale, log_nu = problem.error_parameters(theta)
     sites = warm.sites
     if sites is None:
         fix_hours = problem.hours[observations.state]
         sites = starting_sites(observations, fix_hours, log_scale, log_nu)
-    point = evaluate_at(problem, theta, warm.states)
+    point = evaluate_at(problem, theta, warm.states, warm.basis)
     if not np.isfinite(point.value):
         raise ModeNotFound("the density is not finite at the start")
     sweeps, mixer, patience = 0, SiteMixer(), Patience()
     for rounds in range(MAX_ROUNDS):
-        try:
-            band, cholesky, exact = factored(problem, point, sites)
-        except ModeNotFound:
-            sites = sites.without_negative()
-            band, cholesky, exact = factored(problem, point, sites)
+        sites, band, cholesky, exact = _factored(problem, point, sites)
         spread = spread_around(problem, theta, point, band, cholesky)
-        linear = _Linear(problem, point, spread.adjoint, exact)
-        for sweep in range(SWEEPS_PER_ROUND):
-            try:
-                _, step, mean, covariance = linear.solved(sites)
-            except NotPositiveDefinite:
-                raise ModeNotFound("the sites leave the Hessian indefinite") from None
+        linear = _Linear.at(problem, point, spread, exact=exact)
+        band_seen, factor_seen = linear.towards(sites, sites)[1:]
+        for _ in range(SWEEPS_PER_ROUND):
+            decrement, mean, covariance = linear.marginals(sites, band_seen, factor_seen)
             cavity = cavities(sites, mean, covariance)
             moments = tilted(observations, cavity, log_scale, log_nu)
             moved = _moved(moments, mean, covariance, cavity)
             sweeps += 1
-            gradient = point.full_gradient(problem, sites)
-            decrement = -float(np.sum(gradient * step))
             if not np.isfinite(moved) or not np.isfinite(decrement):
                 raise ModeNotFound("a site's moments are not finite")
-            if moved < site_tolerance and (sweep > 0 or decrement < tolerance):
+            due = np.sqrt(max(decrement, 0.0) / len(observations.state))
+            if moved < max(site_tolerance, due):
                 break
             wanted = mixer.proposed(sites, matched_sites(sites, cavity, moments), covariance)
-            sites = _kept_positive(problem, point, exact, sites, wanted)
-        if moved < site_tolerance and decrement < tolerance and sweep == 0:
+            sites, band_seen, factor_seen = linear.towards(sites, wanted)
+        if moved < site_tolerance and decrement < tolerance:
             if not exact:
                 raise ModeNotFound("the Hessian is indefinite where the gradient vanishes")
+            if not cavity.sound.all():
+                raise ModeNotFound("a site holds more than all that is known of its fix")
+            band, cholesky, _ = factored(problem, point, sites)
+            spread = spread_around(problem, theta, point, band, cholesky)
             mode = Mode(theta, point, sites, band, cholesky, rounds)
             return Approximation(problem, mode, spread, cavity, moments, sweeps)
         point = _step(problem, theta, sites, point, patience)
     raise ModeNotFound(f"the sites did not settle in {MAX_ROUNDS} rounds")
+
+
+def _factored(
+    problem: TrackProblem, point: Point, sites: Sites
+) -> tuple[Sites, Float[np.ndarray, "states dim 2*dim"], Cholesky, bool]:
+    """Factor the Hessian; sites of negative precision give way where they leave it none."""
+    try:
+        return sites, *factored(problem, point, sites)
+    except ModeNotFound:
+        sites = sites.without_negative()
+        return sites, *factored(problem, point, sites)
 
 
 def _moved(moments: Tilted, mean: np.ndarray, covariance: np.ndarray, cavity: Cavity) -> float:
@@ -236,22 +296,6 @@ def _moved(moments: Tilted, mean: np.ndarray, covariance: np.ndarray, cavity: Ca
     )
     change = np.maximum(by_mean.max(axis=1), by_covariance.max(axis=(1, 2)))
     return float(change[cavity.sound].max(initial=0.0))
-
-
-def _kept_positive(
-    problem: TrackProblem, point: Point, exact: bool, sites: Sites, wanted: Sites
-) -> Sites:
-    """The wanted sites, or part of the way to them where the Hessian would not stay positive."""
-    share = 1.0
-    for _ in range(12):
-        trial = sites.mixed(wanted, share)
-        try:
-            factor(point.band(problem, trial, exact=exact))
-        except NotPositiveDefinite:
-            share *= 0.5
-            continue
-        return trial
-    raise ModeNotFound("no change of the sites keeps the Hessian positive definite")
 
 
 def _step(

@@ -11,8 +11,9 @@ one is stood in for by the site that expectation propagation finds (`trackfit.in
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
+from typing import Self
 
 import numpy as np
 from jaxtyping import Float, Int
@@ -26,6 +27,11 @@ class Sites:
 
     precision: Float[np.ndarray, "fixes 2 2"]
     pull: Float[np.ndarray, "fixes 2"]
+
+    @classmethod
+    def none(cls, fixes: int) -> Self:
+        """Sites that say nothing."""
+        return cls(np.zeros((fixes, 2, 2)), np.zeros((fixes, 2)))
 
     def mixed(self, other: Sites, share: float) -> Sites:
         """Sites moved by a share of the way to others, in natural parameters."""
@@ -70,6 +76,12 @@ class Observations:
     def n_parameters(self) -> int:
         """Error parameters at the end of the engine's vector: log scale, then log nu if heavy."""
         return 2 if self.heavy else 1
+
+    @cached_property
+    def seen(self) -> tuple[Int[np.ndarray, " seen"], Observations]:
+        """The states that have fixes, and the observations numbered by them."""
+        states, number = np.unique(self.state, return_inverse=True)
+        return states, replace(self, state=number)
 
     @cached_property
     def precision(self) -> Float[np.ndarray, "fixes 2 2"]:

@@ -8,7 +8,7 @@ as N(m, V + s^2 C), or with heavy tails as the mixture of N(m, V + s^2 C / w) ov
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TypeVar
+from typing import Self
 
 import numpy as np
 from jaxtyping import Float
@@ -17,9 +17,6 @@ from scipy.special import logsumexp
 from trackfit.inference.observations import LOG_2PI
 from trackfit.inference.sites import determinant, inverse_2x2
 from trackfit.inference.tails import weight_nodes
-
-# typing.Self cannot be checked at run time where methods are checked one by one
-Kind = TypeVar("Kind", bound="Predicted")
 
 
 @dataclass(frozen=True)
@@ -50,12 +47,12 @@ class Predicted:
 
     @classmethod
     def of(
-        cls: type[Kind],
+        cls,
         offset_km: Float[np.ndarray, "fixes 2"],
         covariance_km2: Float[np.ndarray, "fixes 2 2"],
         error_km2: Float[np.ndarray, "fixes 2 2"],
         log_nu: float | None,
-    ) -> Kind:
+    ) -> Self:
         """Compare reported positions with predictions of the true ones.
 
         Parameters

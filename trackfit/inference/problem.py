@@ -84,10 +84,8 @@ class TrackProblem:
         n_motion = len(self.motion.parameters)
         log_pace = None
         if self.pace is not None:
-            log_pace = jnp.asarray(self.pace.root @ theta[-self.pace.spells :])
-        return ProcessParameters(
-            jnp.asarray(theta[:n_motion]), jnp.asarray(theta[n_motion : self.n_process]), log_pace
-        )
+            log_pace = self.pace.root @ theta[-self.pace.spells :]
+        return ProcessParameters(theta[:n_motion], theta[n_motion : self.n_process], log_pace)
 
     def whole_gradient(
         self, process: ProcessParameters, errors: Float[np.ndarray, " errors"]
@@ -98,10 +96,14 @@ class TrackProblem:
             parts.append(self.pace.root.T @ np.asarray(process.log_pace))
         return np.concatenate(parts)
 
-    def padded_states(self, states: Float[np.ndarray, "states dim"]) -> jnp.ndarray:
+    def padded_states(
+        self, states: Float[np.ndarray, "states dim"]
+    ) -> Float[np.ndarray, "dim padded"]:
         """States as the compiled functions take them: quantities first, the last one repeated."""
-        extra = self.padded - self.n_states
-        return jnp.asarray(np.pad(states, ((0, extra), (0, 0)), mode="edge").T)
+        padded = np.empty((self.dim, self.padded))
+        padded[:, : self.n_states] = states.T
+        padded[:, self.n_states :] = states[-1][:, None]
+        return padded
 
 
 @dataclass(frozen=True)
@@ -133,7 +135,7 @@ class Point:
         self, problem: TrackProblem, sites: Sites, *, exact: bool = True
     ) -> Float[np.ndarray, "states dim 2*dim"]:
         """Hessian of `density`, or the Gauss-Newton one where not `exact`."""
-        band = np.array(self.evaluation.band[: problem.n_states])
+        band = np.array(np.asarray(self.evaluation.band)[: problem.n_states])
         if not exact:
             curvature = np.asarray(self.evaluation.curvature)[: problem.n_states]
             band[:, 0, 0] += curvature[:, 0]
@@ -164,10 +166,14 @@ def evaluate_at(
     problem: TrackProblem,
     theta: Float[np.ndarray, " parameters"],
     states: Float[np.ndarray, "states dim"],
+    basis: Basis | None = None,
 ) -> Point:
-    """Evaluate the process at some states."""
-    z = problem.padded_states(states)
-    basis = evaluate_basis(problem.track.field, problem.track.times, z[0], z[1], VELOCITY_ORDER)
+    """Evaluate the process at some states; `basis` is the field's there where it is known."""
+    padded = problem.padded_states(states)
+    if basis is None:
+        x_km, y_km = jnp.asarray(padded[0]), jnp.asarray(padded[1])
+        basis = evaluate_basis(problem.track.field, problem.track.times, x_km, y_km, VELOCITY_ORDER)
+    z = jnp.asarray(padded)
     evaluation = evaluate(
         problem.motion,
         problem.process_parameters(theta),

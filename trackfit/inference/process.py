@@ -27,6 +27,7 @@ from typing import NamedTuple
 
 import jax
 import jax.numpy as jnp
+import numpy as np
 from jaxtyping import Array, Float, Int
 
 from trackfit.motion import FieldTimes, Motion, VelocityField
@@ -66,9 +67,9 @@ class ProcessParameters(NamedTuple):
     each spell (None where the pace does not vary).
     """
 
-    log_motion: Float[Array, " motion"]
-    amplitudes: Float[Array, " amplitudes"]
-    log_pace: Float[Array, " spells"] | None = None
+    log_motion: Float[Array | np.ndarray, " motion"]
+    amplitudes: Float[Array | np.ndarray, " amplitudes"]
+    log_pace: Float[Array | np.ndarray, " spells"] | None = None
 
 
 class Start(NamedTuple):
@@ -201,7 +202,7 @@ def linear_steps(
 
 def field_at(theta: ProcessParameters, basis: Basis, z: Array, order: int) -> Array:
     """The velocity field's rows at the states; kept whole so that they are computed once."""
-    rows = velocity_jet(theta.amplitudes, basis, z.shape[1], order)
+    rows = velocity_jet(jnp.asarray(theta.amplitudes), basis, z.shape[1], order)
     return jax.lax.optimization_barrier(rows)
 
 
@@ -230,7 +231,7 @@ def step_terms(
 ) -> StepTerms:
     """Evaluate all steps at their ends, given the field at their starts."""
     k = motion.k
-    F, G, W, log_det = motion.transition(theta.log_motion, steps.dt_hours)
+    F, G, W, log_det = motion.transition(jnp.asarray(theta.log_motion), steps.dt_hours)
     pace = jnp.zeros(()) if theta.log_pace is None else theta.log_pace[steps.spell]
     calm = steps.mask * jnp.exp(-2.0 * pace)
     log_det = log_det + 2.0 * k * pace
@@ -256,7 +257,7 @@ def start_terms(
 ) -> StartTerms:
     """The prior of the first state: position around its mean, velocity around the field."""
     start = track.start
-    position, *velocity = motion.start_precision(theta.log_motion, start.sd_km)
+    position, *velocity = motion.start_precision(jnp.asarray(theta.log_motion), start.sd_km)
     if theta.log_pace is not None:
         velocity = [p * jnp.exp(-2.0 * theta.log_pace[track.steps.spell[0]]) for p in velocity]
     precision = [p for p in (position, *velocity) for _ in range(2)]

@@ -55,7 +55,7 @@ def leave_one_out_replicates(
 def _factors(found: Approximation) -> tuple[Cholesky, Cholesky]:
     """Factors of A and of H: exact where A has one, those of Gauss and Newton else."""
     sites, point = found.mode.sites, found.mode.point
-    none = Sites(np.zeros_like(sites.precision), np.zeros_like(sites.pull))
+    none = Sites.none(len(sites.pull))
     try:
         return factor(point.band(found.problem, none)), found.mode.cholesky
     except NotPositiveDefinite:
