@@ -68,8 +68,10 @@ def step_check_table(fits: "Sequence[Fit]") -> list[str]:
 
 def convergence(fits: "Sequence[Fit]") -> str:
     """Say how many fits converged."""
-    good = sum(fit.status.ok for fit in fits)
-    return f"{good} of {len(fits)} fits converged."
+    failed = [fit for fit in fits if not fit.status.ok]
+    told = f"{len(fits) - len(failed)} of {len(fits)} fits converged"
+    names = ", ".join(f"{fit.tag} ({fit.status.name})" for fit in failed)
+    return f"{told}; not {names}." if failed else f"{told}."
 
 
 def findings(judged: "Judged") -> list[str]:

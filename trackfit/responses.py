@@ -8,7 +8,7 @@ import numpy as np
 from jaxtyping import Float
 
 from trackfit.inference.estimates import NORMAL_95
-from trackfit.inference.fit import Fit
+from trackfit.inference.fit import Fit, FitStatus
 from trackfit.layers.splines import spline_jet
 from trackfit.motion import DistanceTerm, SmoothTerm
 from trackfit.motion.terms import TermName
@@ -30,6 +30,8 @@ class Response:
         Pointwise 95 % band from the parameters' covariance.
     on_path
         The layer's values along the fitted path.
+    fit_status
+        How the fit ended.
     """
 
     tag: str
@@ -41,6 +43,7 @@ class Response:
     lower95: Float[np.ndarray, " m"]
     upper95: Float[np.ndarray, " m"]
     on_path: Float[np.ndarray, " n"]
+    fit_status: FitStatus
 
 
 def responses_of(fit: Fit, names: tuple[TermName, ...]) -> list[Response]:
@@ -74,6 +77,7 @@ def _response(fit: Fit, slot: int, name: TermName, places: np.ndarray) -> Respon
         lower95=h - NORMAL_95 * sd,
         upper95=h + NORMAL_95 * sd,
         on_path=on_path,
+        fit_status=fit.status,
     )
 
 

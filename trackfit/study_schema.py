@@ -318,8 +318,10 @@ class Paths(Table):
     draws: int = setting(20, "Number of possible paths to draw for each tag.", ge=0, le=10_000)
     keep_at_sea: bool | None = setting(
         None,
-        "Keep positions and drawn paths off the land of `[coast]`: no position stands on it, no "
-        "drawn path crosses it. `false` for animals that fly or haul out.",
+        "Keep positions and drawn paths off the land of `[coast]`, as far as fixes and land leave "
+        "a way by sea; where they leave none, a warning says when, and the path there is the one "
+        "without a coast. Positions, ellipses and draws are changed, not the parameters. `false` "
+        "for animals that fly or haul out.",
         shown="true where there is a `[coast]`",
     )
 

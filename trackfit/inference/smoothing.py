@@ -16,13 +16,12 @@ at the mode until tau settles there; then the parameters are fitted anew, and so
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import replace
 
 import numpy as np
 from jaxtyping import Float
 
-from trackfit.inference.optimise import Minimum, nearest_positive
+from trackfit.inference.optimise import Minimum, Rejected, nearest_positive
 from trackfit.inference.parameters import ParameterSet
 from trackfit.inference.search import Search
 
@@ -72,7 +71,7 @@ def with_spread(
     """
     groups = smooth_groups(parameters)
     floor = np.array([1e-6 * p.reach**-2.0 for p in parameters.free])
-    before = np.array([p.prior_sd**-2.0 for p in parameters.free])
+    before = _prior_precision(parameters)
     mean = np.array([p.prior_mean for p in parameters.free])
     tau = {name: parameters.free[at[0]].prior_sd for name, at in groups.items()}
     first = dict(tau)
@@ -107,36 +106,36 @@ def with_spread(
     return replace(parameters, all=every), settled
 
 
-def settle(
-    search: Search,
-    found: Minimum,
-    hessian: Float[np.ndarray, "free free"],
-    max_iterations: int,
-    progress: Callable[[int, float], None],
-) -> tuple[Minimum, Float[np.ndarray, "free free"]]:
+def settle(search: Search, found: Minimum, max_iterations: int) -> Minimum:
     """Update the spreads and search anew, in turn; the search's parameters are replaced.
 
-    A search that does not converge ends it.
-
-    Raises
-    ------
-    Rejected
-        No mode was found at an update.
+    A search that does not converge, or finds no mode, ends it.
     """
     if not smooth_groups(search.parameters):
-        return found, hessian
+        return found
     for _ in range(MOST_TURNS):
         if not found.converged:
             break
-        updated, settled = with_spread(search.parameters, found.at, hessian)
-        if settled:
+        before = search.parameters
+        try:
+            hessian = search.hessian(found)
+            search.parameters, settled = with_spread(before, found.at, hessian)
+            if settled:
+                search.parameters = before
+                break
+            floor = np.array([p.reach**-2.0 for p in before.free])
+            change = _prior_precision(search.parameters) - _prior_precision(before)
+            metric = nearest_positive(hessian + np.diag(change), floor)
+            found = search.run(found.at, metric, max_iterations, _silent)
+        except Rejected:
+            search.parameters = before
             break
-        before = np.array([p.prior_sd**-2.0 for p in search.parameters.free])
-        search.parameters = updated
-        free = search.parameters.free
-        change = np.array([p.prior_sd**-2.0 for p in free]) - before
-        floor = np.array([p.reach**-2.0 for p in free])
-        metric = nearest_positive(hessian + np.diag(change), floor)
-        found = search.run(found.at, metric, max_iterations, progress)
-        hessian = search.hessian(found)
-    return found, hessian
+    return found
+
+
+def _silent(iteration: int, decrement: float) -> None:
+    """Tell nothing of a search within a search."""
+
+
+def _prior_precision(parameters: ParameterSet) -> Float[np.ndarray, " free"]:
+    return np.array([p.prior_sd**-2.0 for p in parameters.free])
