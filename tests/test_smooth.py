@@ -2,14 +2,17 @@
 
 from dataclasses import replace
 from functools import cache
+from pathlib import Path
 
 import jax.numpy as jnp
 import numpy as np
 import pytest
+import trackfit_demo
 from engine_standins import bumpy_layer
 from scipy.interpolate import BSpline
 from simulator import Sea, Tag, simulate
 
+import trackfit
 from trackfit.inference.fit import FitStatus, fit_track
 from trackfit.inference.parameters import Parameter, ParameterSet
 from trackfit.inference.search import Search
@@ -244,3 +247,31 @@ def test_the_number_of_bends_lies_between_none_and_all():
     size = len(parameters.free)
     assert effective_bends(parameters, np.zeros((size, size)))["depth"] == 8.0
     assert effective_bends(parameters, 4.0 * np.eye(size))["depth"] == 0.0
+
+
+def test_a_study_asks_for_a_smooth_curve_and_gets_it_everywhere(tmp_path):
+    """Penguin TI-P03 of the demonstration likes one temperature; its study does not say so."""
+    source = Path(trackfit_demo.__file__).parent
+    for name in ("penguins.csv", "seals.csv", "coast.geojson", "layers"):
+        (tmp_path / name).symlink_to(source / name)
+    text = (source / "study.toml").read_text(encoding="utf-8")
+    text = text.replace('shape = "humped"', 'shape = "smooth"')
+    text = text.replace("seed = 1 ", 'tags = ["TI-P03"]\nseed = 1 ')
+    (tmp_path / "study.toml").write_text(text + "\n[fit]\npoints = 0\n", encoding="utf-8")
+    prepared = trackfit.prepare(trackfit.read_study(tmp_path / "study.toml"))
+    (fit,) = trackfit.fit_tags(prepared)
+    assert fit.status is FitStatus.CONVERGED
+    table = trackfit.parameter_table([fit]).set_index("parameter")
+    assert table.loc["preference.temperature.bends", "role"] == "chosen"
+    assert 1.0 < table.loc["preference.temperature.bends", "estimate"] < 6.0
+    assert not table.index.str.contains("bend_").any()
+    curve = next(r for r in trackfit.preference_responses(prepared, [fit]) if r.unit == "degC")
+    # truth: 12 z - 16 z^2 with z = (T - 11)/1.5, best at 11.56 (demo_tracks/truth)
+    assert abs(curve.at[np.argmax(curve.h)] - 11.56) < 0.6
+    judged = trackfit.judge_fits(prepared, [fit])
+    said = next(v.sentence for v in judged.verdicts if "temperature" in v.sentence)
+    assert said.startswith("The preference for temperature is distinguishable from none")
+    # of the bends as many parameters count as the data tell
+    (criticism,) = judged.criticisms
+    told = table.loc["preference.temperature.bends", "estimate"]
+    assert criticism.scores.estimated == pytest.approx(5.0 + told)
