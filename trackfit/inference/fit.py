@@ -52,6 +52,10 @@ class FitStatus(Enum):
         "No most probable path was found at the starting values; check the fixes and their errors, "
         "or use a shorter step."
     )
+    NOT_SETTLED = (
+        "The tags had not agreed on the responses they share when the sweeps over them ended; "
+        "estimates and intervals are not to be trusted."
+    )
     TOO_FEW_FIXES = "The tag has too few usable fixes to fit; nothing was estimated."
 
     @property
@@ -72,8 +76,8 @@ class Fit:
     Attributes
     ----------
     parameters
-        One row a parameter: parameter, unit, estimate, sd, lower95, upper95, role (estimated, fixed
-        or derived from others).
+        One row a parameter: parameter, unit, estimate, sd, lower95, upper95, role (estimated,
+        shared by all tags, fixed, or derived from others).
     log_marginal
         Laplace log marginal likelihood of the fixes (in km) at the estimates, priors left out.
     step_check
@@ -98,6 +102,9 @@ class Fit:
 
 Progress = Callable[[float, str], None]
 
+Begin = tuple[Float[np.ndarray, " free"], Float[np.ndarray, "free free"]]
+"""Where a search begins: the free parameters, and a first guess of the Hessian there."""
+
 
 def _silent(done: float, message: str) -> None:
     """Take no notice of progress."""
@@ -109,10 +116,12 @@ def fit_track(
     settings: FitSettings,
     report_hours: Float[np.ndarray, " n"],
     progress: Progress = _silent,
+    begin: Begin | None = None,
 ) -> Fit:
     """Fit a model to one track by the fast engine.
 
-    Never raises for what the data do: the status says how it ended.
+    Never raises for what the data do: the status says how it ended. With `begin` the search starts
+    there, without the coarse grid.
     """
     if len(data.hours) < MIN_FIXES:
         return _empty(data, model, settings, FitStatus.TOO_FEW_FIXES)
@@ -122,7 +131,9 @@ def fit_track(
     start = np.array([p.start for p in free])
     metric = np.diag([p.reach**-2.0 for p in free])
     try:
-        if settings.coarse_factor > 1:
+        if begin is not None:
+            start, metric = begin
+        elif settings.coarse_factor > 1:
             coarse = Search(data, model, coarse_step, np.zeros(0))
             found = coarse.run(start, metric, settings.max_iterations, _part(progress, 0.0, 0.3))
             start, metric = found.at, coarse.metric(found)
