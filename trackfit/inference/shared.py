@@ -14,11 +14,11 @@ ended, and A = inv(H_aa) H_ab,
 
 is its new site: the Laplace approximation of the tilted posterior divided by the cavity (Laplace
 propagation: Smola, Vishwanathan & Eskin 2003, Adv. Neural Inf. Process. Syst. 16; over parts of the
-data as here: Gelman et al. 2020, J. Mach. Learn. Res. 21:17). Tracks are swept in turn until b has
-settled. Then every track's mode of b is m, so the slopes of all tracks and of p0 add up to nothing
-there: m is the mode of all parameters of all tracks together. The Hessian of them all is an arrow,
-a block for each a_i beside b, and P is its Schur complement for b: the inverse of P, carried to a_i
-through A, is the joint Laplace approximation.
+data as here: Gelman et al. 2020, J. Mach. Learn. Res. 21:17). Each track is first fitted by itself;
+then all are swept in turn until b has settled. Then every track's mode of b is m, so the slopes of
+all tracks and of p0 add up to nothing there: m is the mode of all parameters of all tracks. The
+Hessian of them all is an arrow, a block for each a_i beside b, and P is its Schur complement for b:
+the inverse of P, carried to a_i through A, is the joint Laplace approximation.
 
 Where a track's likelihood is not concave in b, Q_i has negative eigenvalues. Cavities take them for
 zero with the slope kept, which leaves the fixed point where it is; the covariance counts them. A
@@ -104,10 +104,11 @@ def fit_shared(
     settled, before = False, whole.posterior()
     for sweep in range(max_sweeps):
         for tag in tags:
-            tag.sweep(whole.cavity(tag), sweep, progress)
+            cavity = whole.cavity(tag) if sweep else whole.prior(tag)
+            tag.sweep(cavity, sweep, progress)
         after = whole.posterior()
         if revise is not None:
-            whole.parameters = revise(whole.parameters, *after)
+            whole.take(revise(whole.parameters, *after))
             after = whole.posterior()
         settled = sweep > 0 and _settled(before, after)
         before = after
@@ -327,23 +328,22 @@ class _Whole:
 
     def __init__(self, tags: Sequence[_Tag], parameters: ParameterSet) -> None:
         self.tags = tags
-        self._parameters = parameters
+        self.parameters = parameters
 
-    @property
-    def parameters(self) -> ParameterSet:
-        """The parameters, with the priors of the shared ones as they are now."""
-        return self._parameters
-
-    @parameters.setter
-    def parameters(self, revised: ParameterSet) -> None:
-        self._parameters = revised
+    def take(self, revised: ParameterSet) -> None:
+        """Take other priors of the shared parameters."""
+        self.parameters = revised
         for tag in self.tags:
             tag.take_priors(revised)
 
     def _prior(self) -> tuple[Square, Vector]:
-        shared = [self._parameters.all[i] for i in self._parameters.shared_at]
+        shared = [self.parameters.all[i] for i in self.parameters.shared_at]
         precision = np.array([p.prior_sd**-2.0 for p in shared])
         return np.diag(precision), precision * np.array([p.prior_mean for p in shared])
+
+    def prior(self, tag: _Tag) -> JointNormal:
+        """The prior alone: every track is first fitted by itself, as if nothing were shared."""
+        return JointNormal(tag.at, *self._prior())
 
     def cavity(self, left_out: _Tag) -> JointNormal:
         """The prior and the sites of all tracks but one."""
@@ -360,7 +360,7 @@ class _Whole:
         for site in (tag.site for tag in self.tags if tag.site is not None):
             precision, shift = precision + site.precision, shift + site.shift
             curvature = curvature + site.curvature
-        reach = np.array([self._parameters.all[i].reach for i in self._parameters.shared_at])
+        reach = np.array([self.parameters.all[i].reach for i in self.parameters.shared_at])
         mean = _inverse(precision, reach) @ shift
         scaled = np.linalg.eigvalsh(curvature * np.outer(reach, reach))
         return mean, _inverse(curvature if scaled[0] >= KNOWS_NOTHING else precision, reach)
