@@ -143,11 +143,18 @@ def _fit_and_write(
             compare=study.compare or (Compare() if compare else None),
             progress=progress,
         )
-    filled = trackfit.fill_tracks(prepared, fits) if fill else []
+        filled = trackfit.fill_tracks(prepared, fits, progress) if fill else []
     _tell(story, (), [warning for track in filled for warning in track.warnings])
-    folder = trackfit.write_results(
-        study.output_folder, prepared, fits, filled, judged=judged, overwrite=replace
-    )
+    with story.progress() as progress:
+        folder = trackfit.write_results(
+            study.output_folder,
+            prepared,
+            fits,
+            filled,
+            judged=judged,
+            overwrite=replace,
+            progress=progress,
+        )
     click.echo("\n".join([*parameter_table(fits), *step_check_table(fits)]))
     click.echo("\n".join(findings(judged)))
     click.echo(f"\n{convergence(fits)}\nResults: {folder}")

@@ -11,6 +11,7 @@ from trackfit.faults import TrackfitError
 
 from .app import app
 from .exits import ExitCode
+from .interrupts import forget_interrupt, no_interrupt_lost
 
 TRACEBACK_VARIABLE = "TRACKFIT_TRACEBACK"
 INTERRUPTED = "Interrupted. Results are put in place at the very end, so this run left none."
@@ -25,11 +26,13 @@ def main(arguments: Sequence[str] | None = None) -> int:
         Words of the command line; those of the process when None.
     """
     try:
-        return int(app.main(args=arguments, prog_name="trackfit", standalone_mode=False) or 0)
+        with no_interrupt_lost():
+            return int(app.main(args=arguments, prog_name="trackfit", standalone_mode=False) or 0)
     except click.ClickException as wrong:
         wrong.show()
         return ExitCode.USAGE
     except (KeyboardInterrupt, click.Abort):
+        forget_interrupt()
         return _say(INTERRUPTED, ExitCode.INTERRUPTED)
     except TrackfitError as fault:
         return _say(str(fault), ExitCode.WRONG)

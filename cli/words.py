@@ -49,9 +49,9 @@ def parameter_table(fits: "Sequence[Fit]") -> list[str]:
 
 
 def _numbers(row: "pd.Series") -> Sequence[str]:
-    """Estimate, sd and limits; a parameter that the study fixes has no sd to quote."""
-    if row["role"] == "fixed":
-        return [f"{row['estimate']:.4g}", "fixed", "", ""]
+    """Estimate, sd and limits; what the study fixes or the fit chooses has no sd to quote."""
+    if row["role"] in ("fixed", "chosen"):
+        return [f"{row['estimate']:.4g}", str(row["role"]), "", ""]
     return [f"{row[name]:.4g}" for name in ("estimate", "sd", "lower95", "upper95")]
 
 
@@ -68,8 +68,10 @@ def step_check_table(fits: "Sequence[Fit]") -> list[str]:
 
 def convergence(fits: "Sequence[Fit]") -> str:
     """Say how many fits converged."""
-    good = sum(fit.status.ok for fit in fits)
-    return f"{good} of {len(fits)} fits converged."
+    failed = [fit for fit in fits if not fit.status.ok]
+    told = f"{len(fits) - len(failed)} of {len(fits)} fits converged"
+    names = ", ".join(f"{fit.tag} ({fit.status.name})" for fit in failed)
+    return f"{told}; not {names}." if failed else f"{told}."
 
 
 def findings(judged: "Judged") -> list[str]:

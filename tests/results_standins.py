@@ -27,6 +27,7 @@ class Track:
     tag: str
     table: pd.DataFrame
     draws_lonlat: np.ndarray
+    fit_status: Status = Status.converged
 
     @property
     def draw_times(self):
@@ -55,6 +56,7 @@ class OneResponse:
     h: np.ndarray
     lower95: np.ndarray
     upper95: np.ndarray
+    fit_status: Status = Status.converged
 
 
 @dataclass(frozen=True)
@@ -63,7 +65,15 @@ class SomeFixes:
     set_aside: pd.DataFrame
 
 
-def wandering_track(tag="seal 7", start=(-5.0, 56.0), hours=96, draws=5, seed=3, km_per_hour=3.0):
+def wandering_track(
+    tag="seal 7",
+    start=(-5.0, 56.0),
+    hours=96,
+    draws=5,
+    seed=3,
+    km_per_hour=3.0,
+    fit_status=Status.converged,
+):
     """A wandering track on the sphere with ellipses that swell in a gap in its middle."""
     rng = np.random.default_rng(seed)
     course = np.cumsum(rng.normal(0.0, 0.25, hours)) + 1.0
@@ -99,7 +109,7 @@ def wandering_track(tag="seal 7", start=(-5.0, 56.0), hours=96, draws=5, seed=3,
     noise = rng.normal(0, 1, (draws, hours, 2)) * (sd_minor / 111_200)[None, :, None]
     paths = np.stack([lon, lat], axis=-1) + noise
     paths[..., 0] = wrap(paths[..., 0])
-    return Track(tag, table.loc[:, list(POSITION_COLUMNS)], paths)
+    return Track(tag, table.loc[:, list(POSITION_COLUMNS)], paths, fit_status)
 
 
 def wrap(lon):

@@ -189,7 +189,7 @@ def test_a_fix_outside_the_time_of_a_layer(tmp_path):
     with pytest.raises(
         LayerError,
         match=r"tag TI-P01: the fix at 2031-01-01 00:00:00 UTC lies outside the time of layer "
-        r"'(temperature|water)' \(2025-.* to 2025-01-31 00:00 UTC, .*\.nc\)",
+        r"'(temperature|water)' \(2025-01-01 00:00 to 2025-01-31 00:00 UTC, .*\.nc\)",
     ):
         prepare(read_study(study))
 
@@ -244,6 +244,45 @@ def test_a_plane_that_stretches_is_warned_of(tmp_path):
     assert "the plane stretches distances by up to" in warning
     narrow = prepare(plain_study(tmp_path / "b", fixes.replace("-60", "59")))
     assert narrow.warnings == ()
+
+
+def test_a_tag_with_few_fixes_is_noted(tmp_path):
+    def notes(fixes):
+        rows = [f"few,2020-01-01T{h:02d}:00Z,1,2,30" for h in range(fixes)]
+        text = "\n".join(["tag,time,lon,lat,gps_sd_m", *rows]) + "\n"
+        return prepare(plain_study(tmp_path / str(fixes), text)).notes
+
+    assert notes(20) == ()
+    (note,) = notes(19)
+    assert note.startswith("tag few: 19 fixes to use are few: expect wide intervals")
+    # below three the status of the fit says so
+    assert len(notes(3)) == 1
+    assert notes(2) == ()
+
+
+def test_filling_and_drawing_tell_how_far_they_are(demo, tmp_path):
+    told = []
+
+    def progress(*words):
+        told.append(words)
+
+    tracks = trackfit.fill_tracks(demo.prepared, demo.fits, progress)
+    assert told == [
+        ("positions", 0.0, "filling tag TI-P01"),
+        ("positions", 0.5, "filling tag TI-S02"),
+        ("positions", 1.0, "2 tracks filled"),
+    ]
+    told.clear()
+    folder = trackfit.write_results(
+        tmp_path / "out", demo.prepared, demo.fits, tracks, progress=progress
+    )
+    figures = sorted(path.name for path in (folder / "figures").iterdir())
+    assert "track_ti-p01.png" in figures
+    assert len(told) == len(figures)
+    assert {what for what, *_ in told} == {"figures"}
+    shares = [done for _, done, _ in told]
+    assert shares == sorted(shares)
+    assert told[-1] == ("figures", 1.0, f"{len(figures)} figures drawn")
 
 
 def test_a_fit_that_cannot_be_does_not_stop_the_others(tmp_path):

@@ -23,6 +23,7 @@ import trackfit_cli
 from trackfit_cli import app as commands
 from trackfit_cli import demo, guard, story, words
 from trackfit_cli.exits import EXIT_CODES, ExitCode
+from trackfit_cli.interrupts import no_interrupt_lost
 
 import trackfit
 from trackfit import faults
@@ -120,7 +121,9 @@ class FakeLibrary:
                 "role": ["estimated", "fixed"],
             }
         )
-        status = SimpleNamespace(ok=self.converged, sentence="The search stopped too early.")
+        status = SimpleNamespace(
+            ok=self.converged, name="STOPPED", sentence="The search stopped too early."
+        )
         moved = pd.DataFrame({"parameter": ["diffusion"], "change_in_sd": [0.0712]})
         return [
             SimpleNamespace(tag=t, parameters=table, status=status, step_check=check)
@@ -145,8 +148,11 @@ class FakeLibrary:
         criticisms = tuple(SimpleNamespace(tag=tag) for tag in ("A1", "B2"))
         return Judged(criticisms, verdicts, self.comparison, self.trial)
 
-    def fill_tracks(self, prepared: Any, fits: list[Any]) -> list[SimpleNamespace]:
+    def fill_tracks(
+        self, prepared: Any, fits: list[Any], progress: Callable[[str, float, str], None]
+    ) -> list[SimpleNamespace]:
         self.calls.append("fill_tracks")
+        progress("positions", 1.0, "2 tracks filled")
         return [SimpleNamespace(tag=fit.tag, warnings=()) for fit in fits]
 
     def write_results(
@@ -158,8 +164,10 @@ class FakeLibrary:
         *,
         judged: Judged,
         overwrite: bool,
+        progress: Callable[[str, float, str], None],
     ) -> Path:
         self.calls.append("write_results")
+        progress("figures", 1.0, "3 figures drawn")
         self.written = {
             "folder": folder,
             "filled": [track.tag for track in filled],
@@ -252,7 +260,7 @@ def test_a_fit_that_failed_ends_with_3_and_says_so_even_when_quiet(
     assert trackfit_cli.main(["fit", study, *flags]) == ExitCode.NOT_CONVERGED == 3
     out, err = capsys.readouterr()
     assert "A1: The search stopped too early." in err.splitlines()
-    assert "0 of 2 fits converged." in out.splitlines()
+    assert "0 of 2 fits converged; not A1 (STOPPED), B2 (STOPPED)." in out.splitlines()
     assert "write_results" in library.calls
 
 
@@ -264,6 +272,56 @@ def test_an_interruption_ends_with_130_and_a_sentence(
     out, err = capsys.readouterr()
     assert out == ""
     assert err.strip() == guard.INTERRUPTED
+
+
+class Swallowing:
+    """A finaliser that is interrupted: Python cannot pass the exception on."""
+
+    def __del__(self) -> None:
+        raise KeyboardInterrupt
+
+
+def test_an_interrupt_that_a_callback_swallowed_comes_again(
+    library: FakeLibrary, study: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def swallowed(*arguments: object, **options: object) -> None:
+        Swallowing()
+        for _ in range(1000):
+            time.sleep(0.01)
+
+    monkeypatch.setattr(trackfit, "prepare", swallowed)
+    began = time.monotonic()
+    assert trackfit_cli.main(["run", study]) == ExitCode.INTERRUPTED
+    assert time.monotonic() - began < 5
+
+
+def test_other_unraisable_errors_go_where_they_went(monkeypatch: pytest.MonkeyPatch) -> None:
+    told: list[object] = []
+
+    def record(swallowed: "sys.UnraisableHookArgs") -> None:
+        told.append(swallowed.exc_type)
+
+    monkeypatch.setattr(sys, "unraisablehook", record)
+    with no_interrupt_lost():
+        assert sys.unraisablehook is not record
+        sys.unraisablehook(SimpleNamespace(exc_type=ValueError))  # type: ignore[arg-type]
+    assert told == [ValueError]
+    assert sys.unraisablehook is record
+
+
+def test_an_interrupt_inside_exec_ends_a_module_with_its_code(tmp_path: Path) -> None:
+    """`python -m` would end by the signal, were it not forgotten."""
+    program = tmp_path / "program.py"
+    program.write_text(
+        "import sys\nfrom trackfit_cli.interrupts import forget_interrupt\n"
+        "try:\n    exec('raise KeyboardInterrupt')\nexcept KeyboardInterrupt:\n"
+        "    forget_interrupt()\nsys.exit(130)\n"
+    )
+    path = os.pathsep.join([str(tmp_path), os.environ.get("PYTHONPATH", "")])
+    ended = subprocess.run(
+        [sys.executable, "-m", "program"], env={**os.environ, "PYTHONPATH": path}
+    )
+    assert ended.returncode == 130
 
 
 def test_a_fault_of_our_own_is_one_sentence_and_a_file(
@@ -391,7 +449,12 @@ def test_run_does_everything_and_prints_the_answer(
     assert re.search(r"^B2 error_scale +2 +fixed +1$", out, re.MULTILINE)
     assert re.search(r"^at half the step +change in sd\nA1 diffusion +\+0\.07$", out, re.MULTILINE)
     assert out.endswith(f"\n2 of 2 fits converged.\nResults: {folder}\n")
-    assert err.splitlines()[2:] == ["A1: fitted", "B2: fitted"]
+    assert err.splitlines()[2:] == [
+        "A1: fitted",
+        "B2: fitted",
+        "positions: 2 tracks filled",
+        "figures: 3 figures drawn",
+    ]
 
 
 def test_fit_fills_nothing(library: FakeLibrary, study: str) -> None:

@@ -312,10 +312,6 @@ def test_priors_none_and_an_error_scale_at_rest_end_with_a_sentence(tmp_path):
 
 
 @pytest.mark.slow
-@pytest.mark.xfail(
-    strict=False,
-    reason="measured: 15 of 71 interrupts fell inside a callback of JAX, which swallows them",
-)
 @pytest.mark.parametrize("moment", [1.5, 2.5, 3.5, 4.5, 5.5, 6.5])
 def test_interrupted_it_says_so_and_leaves_nothing(tmp_path, moment):
     """Ctrl-C while libraries load, layers are read, programs are compiled, a mode is sought."""

@@ -110,7 +110,7 @@ def test_several_files_are_one_table_and_names_differ_where_they_must(tmp_path):
     fixes = read_fixes(paths)
     assert fixes.table["file"].tolist() == [str(paths[0])]
     assert fixes.set_aside[["file", "line"]].to_numpy().tolist() == [[str(paths[1]), 2]]
-    assert fixes.notes == (f"{paths[1]}: none of its 1 rows is a usable fix",)
+    assert fixes.notes == (f"{paths[1]}: its only row is no usable fix",)
 
 
 @pytest.mark.parametrize("written", ["3", "3.0", " 3 "])
@@ -284,7 +284,7 @@ def test_quoted_cells_may_hold_delimiters_quotes_and_lines(read):
     assert fixes.table["line"].tolist() == [2]
     assert aside(fixes) == [(4, "lat lies outside -90 to 90 degrees")]
     assert fixes.notes == (
-        "fixes.csv: 1 rows run over several lines inside quotation marks, the first from line 2",
+        "fixes.csv: 1 row runs over several lines inside quotation marks, from line 2",
     )
 
 
@@ -306,7 +306,7 @@ def test_lines_are_true_however_a_long_file_is_cut(read, monkeypatch):
     assert fixes.set_aside["line"].tolist() == [10, 15]
     assert fixes.set_aside["reason"][0].startswith("the row has not as many cells")
     assert fixes.notes[0].endswith(
-        "1 rows run over several lines inside quotation marks, the first from line 4"
+        "1 row runs over several lines inside quotation marks, from line 4"
     )
 
 
@@ -338,7 +338,7 @@ def test_rows_out_of_order_are_sorted_and_noted(read):
 
 def test_a_part_of_an_ellipse_is_noted(read):
     fixes = read(f"tag,time,lon,lat,{SIZES}\n{GOOD},,800,,45\nb{GOOD[1:]},,800,200,45\n")
-    assert fixes.notes == ("fixes.csv: 1 rows state a part of an ellipse; it is not used",)
+    assert fixes.notes == ("fixes.csv: 1 row states a part of an ellipse; it is not used",)
 
 
 def test_a_file_without_tags_and_one_without_usable_rows_are_noted(tmp_path):
@@ -349,7 +349,7 @@ def test_a_file_without_tags_and_one_without_usable_rows_are_noted(tmp_path):
     assert fixes.set_aside["tag"].tolist() == ["whale 7", ""]
     assert fixes.notes == (
         "whale 7.csv: has no column of tags; its rows are tag 'whale 7'",
-        "bad.csv: none of its 1 rows is a usable fix",
+        "bad.csv: its only row is no usable fix",
     )
 
 

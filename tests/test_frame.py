@@ -92,6 +92,28 @@ def test_a_users_plane_agrees_with_the_published_example_of_its_method():
     np.testing.assert_allclose(xy_km, [[3962.79945, 2999.71885]], rtol=0, atol=1e-5)
 
 
+@pytest.mark.parametrize(
+    ("text", "description"),
+    [
+        ("EPSG:3035", "ETRS89-extended / LAEA Europe (EPSG:3035)"),
+        (
+            "+proj=tmerc +lat_0=0 +lon_0=-75 +k=0.9996 +datum=WGS84 +type=crs",
+            "Transverse Mercator, World Geodetic System 1984 (TEXT)",
+        ),
+        (
+            "+proj=utm +zone=30 +ellps=intl +type=crs",
+            "Transverse Mercator, ellipsoid International 1924 (Hayford 1909, 1910) (TEXT)",
+        ),
+        (
+            "+proj=laea +lat_0=50 +R=6371000 +type=crs",
+            "Lambert Azimuthal Equal Area (Spherical), sphere of 6371.000 km (TEXT)",
+        ),
+    ],
+)
+def test_a_plane_of_the_user_s_is_described(text, description):
+    assert Plane.from_crs(text).description == description.replace("TEXT", text)
+
+
 def test_published_scale_factors_of_the_polar_equal_area_projection():
     # Snyder (1987) pp. 336-337 as recomputed with PROJ: h = 0.9961950, k = 1.0038196, h k = 1.
     # Our matrix is taken on WGS 84; the two ellipsoids differ by less than 3e-7 in these ratios.

@@ -18,7 +18,7 @@ MODULES = {
 TREES = {name: ast.parse(path.read_text(encoding="utf-8")) for name, path in MODULES.items()}
 
 ORDER = (
-    ("faults", "compiled"),
+    ("faults", "compiled", "counted"),
     ("fix_files", "fixes"),
     ("frame",),
     ("errors",),

@@ -6,6 +6,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from trackfit.inference.optimise import (
+    MAX_IDLE,
+    MAX_REJECTED,
     Rejected,
     difference_hessian,
     minimise,
@@ -104,6 +106,38 @@ def test_values_that_are_not_finite_are_stepped_back_from(bad):
     found = search(patchy, [-9.0], reach=30.0, metric=np.array([[0.1]]))
     assert found.converged
     assert found.at == pytest.approx([0.5], abs=1e-4)
+
+
+def test_a_search_among_holes_ends_with_its_budget():
+    """Every second try has no value: steps succeed, but the search does not go on for ever."""
+    calls = []
+
+    def holed(x):
+        calls.append(x)
+        if len(calls) % 2 == 0:
+            raise Rejected
+        return float(-x[0]), np.array([-1.0])
+
+    found = minimise(
+        holed, np.zeros(1), np.eye(1), np.ones(1), tolerance=1e-8, max_iterations=10_000
+    )
+    assert not found.converged
+    assert len(calls) == 2 * MAX_REJECTED
+
+
+def test_steps_that_gain_nothing_end_the_search():
+    """A slope that the values do not follow: noise lets the steps pass, nothing is gained."""
+    calls = []
+
+    def flat(x):
+        calls.append(x)
+        return 1.0, np.array([1e-6])
+
+    found = minimise(
+        flat, np.zeros(1), 1e-9 * np.eye(1), 1e-3 * np.ones(1), tolerance=1e-8, max_iterations=500
+    )
+    assert found.iterations == MAX_IDLE
+    assert len(calls) == 1 + MAX_IDLE
 
 
 def test_no_value_at_the_start():

@@ -155,7 +155,7 @@ def test_geojson_writes_unknown_as_null(tmp_path):
     track.table.loc[0, "hours_to_fix"] = np.nan
     write_geojson(tmp_path / "p.geojson", [track])
     text = (tmp_path / "p.geojson").read_text()
-    assert '"hours_to_fix": null' in text
+    assert '"hours_to_fix":null' in text
     assert "NaN" not in text
 
 

@@ -3,11 +3,16 @@ import pytest
 import shapely
 from pyproj import Geod
 
-from trackfit.results.geometry import VERTICES, cut_line, ellipse_polygons, ellipse_rings
+from trackfit.results.geometry import (
+    POLYGON_VERTICES,
+    VERTICES,
+    cut_line,
+    ellipse_polygons,
+    ellipse_rings,
+)
 
 GEOD = Geod(ellps="WGS84")
 CHI2_95 = 5.991464547  # chi-squared quantile, 2 degrees of freedom: printed tables give 5.99146
-INSCRIBED = VERTICES / (2 * np.pi) * np.sin(2 * np.pi / VERTICES)  # polygon's share of an ellipse
 
 
 def one(lon, lat, major_m, minor_m, bearing_deg=0.0):
@@ -26,7 +31,18 @@ def test_area_of_the_95_percent_ellipse_is_pi_chi2_s1_s2(lat, bearing_deg):
     scale = np.sqrt(CHI2_95)
     shape = one(12.0, lat, scale * s1, scale * s2, bearing_deg)
     # curvature: a geodesic disc of radius r holds pi r^2 (1 - r^2 / 12 R^2), here 5e-8 of it
-    assert area_m2(shape) == pytest.approx(np.pi * CHI2_95 * s1 * s2 * INSCRIBED, rel=2e-7)
+    assert area_m2(shape) == pytest.approx(np.pi * CHI2_95 * s1 * s2, rel=2e-7)
+
+
+def test_a_polygon_strays_little_from_its_ellipse():
+    """Widened to the right area, no vertex lies more than a quarter of a percent outside."""
+    shape = one(10.0, 60.0, 5000.0, 5000.0)
+    ring = shapely.get_coordinates(shape)
+    assert len(ring) == POLYGON_VERTICES + 1
+    centre = np.full((2, len(ring)), [[10.0], [60.0]])
+    _, _, radius = GEOD.inv(*centre, *ring.T)
+    assert (radius > 5000.0).all()
+    assert radius.max() < 5000.0 * 1.0026
 
 
 def test_long_axis_points_along_the_bearing():
@@ -48,7 +64,7 @@ def test_ellipse_across_the_antimeridian_is_cut_into_two_and_keeps_its_area(lon)
     assert west[2] < -179.8
     assert east[0] > 179.8
     # the cut runs straight in degrees between two vertices, the ellipse along a geodesic
-    assert area_m2(shape) == pytest.approx(np.pi * 9000 * 4000 * INSCRIBED, rel=1e-6)
+    assert area_m2(shape) == pytest.approx(np.pi * 9000 * 4000, rel=1e-6)
 
 
 @pytest.mark.parametrize("lat", [89.95, -89.95, 90.0, -90.0])

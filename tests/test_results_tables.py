@@ -6,7 +6,7 @@ import pandas as pd
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from results_standins import make_fit, make_fixes, make_response, wandering_track
+from results_standins import Status, make_fit, make_fixes, make_response, wandering_track
 
 from trackfit.results import tables
 
@@ -22,7 +22,7 @@ def test_positions_have_fixed_decimals_and_times_in_utc(tmp_path):
     track = wandering_track()
     tables.write_positions(tmp_path / "p.csv", [track])
     header, first, *_ = raw(tmp_path / "p.csv")
-    assert header == ["tag", *track.table.columns]
+    assert header == ["tag", "fit_status", *track.table.columns]
     row = dict(zip(header, first, strict=True))
     assert row["time"] == "2024-03-01T06:00:00Z"
     assert row["lon"] == "-5.000000"
@@ -37,18 +37,18 @@ def test_positions_come_back_as_they_were(tmp_path):
     tracks = [
         wandering_track(),
         wandering_track("007", start=(179.9, -40.0), hours=30),
-        wandering_track("NA", hours=3),
+        wandering_track("NA", hours=3, fit_status=Status.stuck),
     ]
     tables.write_positions(tmp_path / "p.csv", tracks)
     back = tables.read_table(tmp_path / "p.csv")
     expected = tables.positions_table(tracks)
     pd.testing.assert_frame_equal(
-        back[["tag", "time", *FLAGS]],
-        expected[["tag", "time", *FLAGS]],
+        back[["tag", "fit_status", "time", *FLAGS]],
+        expected[["tag", "fit_status", "time", *FLAGS]],
         check_dtype=False,
     )
     assert back["time"].dtype == "datetime64[ns, UTC]"
-    for name in back.columns.drop(["tag", "time", *FLAGS]):
+    for name in back.columns.drop(["tag", "fit_status", "time", *FLAGS]):
         half_unit = {"lon": 5e-7, "lat": 5e-7}.get(name, 0.05 if name.endswith("_m") else 5e-4)
         np.testing.assert_allclose(back[name], expected[name], rtol=0, atol=half_unit * 1.0001)
 
@@ -127,5 +127,5 @@ def test_responses_come_back(tmp_path):
 
 def test_nothing_still_gives_a_header(tmp_path):
     tables.write_positions(tmp_path / "p.csv", [])
-    assert raw(tmp_path / "p.csv") == [["tag", *tables.POSITION_COLUMNS]]
+    assert raw(tmp_path / "p.csv") == [["tag", "fit_status", *tables.POSITION_COLUMNS]]
     assert tables.read_table(tmp_path / "p.csv").empty

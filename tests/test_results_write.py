@@ -21,7 +21,7 @@ def study(tmp_path):
     return {
         "tracks": [
             wandering_track(hours=30),
-            wandering_track("=7", start=(179.9, -40.0), hours=20, draws=0),
+            wandering_track("=7", start=(179.9, -40.0), hours=20, draws=0, fit_status=Status.stuck),
         ],
         "fits": [make_fit(), make_fit("=7"), make_fit("lost", Status.stuck)],
         "responses": [make_response()],
@@ -69,6 +69,7 @@ def test_results_are_read_back(tmp_path, study, name):
     back = read_results(write_folder(tmp_path / "out", **study, formats=[name]))
     expected = pd.concat([t.table.assign(tag=t.tag) for t in study["tracks"]], ignore_index=True)
     assert back.positions["tag"].tolist() == expected["tag"].tolist()
+    assert back.positions["fit_status"].tolist() == ["converged"] * 30 + ["stuck"] * 20
     assert back.positions["time"].tolist() == expected["time"].tolist()
     assert back.positions["time"].dtype == "datetime64[ns, UTC]"
     for flag in ("in_gap", "at_fix", "coast_adjusted"):

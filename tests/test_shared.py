@@ -538,6 +538,47 @@ def test_comparison_and_hidden_fixes_share_as_well(whole):
     assert alone.parameters["sd"][1] > 1.2 * fits[0].parameters["sd"][1]
 
 
+def test_a_smooth_response_of_all_tags(tmp_path):
+    """Its spread stands where the joint posterior has its fixed point, tau^2 = b'b / edf."""
+    text = STUDY.replace('"linear"', '"smooth"')
+    tracks = [track("a", 60, 31), track("b", 90, 32), track("c", 40, 33)]
+    prepared = trackfit.prepare(study_of(tmp_path, tracks, text))
+    fits = trackfit.fit_tags(prepared)
+    assert {fit.status for fit in fits} == {FitStatus.CONVERGED}
+    told = [rows(fit).loc["preference.hill.bends", "estimate"] for fit in fits]
+    assert told == pytest.approx([told[0]] * 3, rel=1e-9)
+    states, parameters = fits[0].states, fits[0].model.parameters
+    at = [i for i, p in enumerate(parameters.free) if p.smooth]
+    tau = {parameters.free[i].prior_sd for i in at}
+    assert tau == {p.prior_sd for fit in fits for p in fit.model.parameters.all if p.smooth}
+    (tau,) = tau
+    edf = len(at) - np.trace(states.theta_covariance[np.ix_(at, at)]) / tau**2
+    wanted = np.sqrt(np.sum(states.theta[at] ** 2) / edf)
+    # log tau has settled where it moves by less than 0.05
+    assert abs(np.log(wanted / tau)) < 0.05
+    (hill,) = (r for r in trackfit.preference_responses(prepared, fits) if r.term == "hill")
+    assert hill.tag == "all tags"
+    steep = np.ptp(hill.h) / np.ptp(hill.at)
+    assert steep == pytest.approx(AMPLITUDE, abs=0.5)
+
+
+def test_a_smooth_response_of_one_tag_is_its_own(tmp_path):
+    """Two roads to the same spread: alone inside the fit, and between the sweeps."""
+    text = STUDY.replace('"linear"', '"smooth"')
+    fits = []
+    for number, words in enumerate((text, text.replace("shared = true\n", ""))):
+        prepared = trackfit.prepare(study_of(tmp_path / str(number), [track("b", 90, 32)], words))
+        fits += trackfit.fit_tags(prepared)
+    shared, plain = (rows(fit) for fit in fits)
+    assert [fit.status for fit in fits] == [FitStatus.CONVERGED] * 2
+    for name in ("preference.hill.linear", "preference.home.distance", "diffusion"):
+        apart = shared.loc[name, "estimate"] - plain.loc[name, "estimate"]
+        # spreads settle to 5 %
+        assert abs(apart) < 0.1 * plain.loc[name, "sd"]
+    bends = (table.loc["preference.hill.bends", "estimate"] for table in (shared, plain))
+    assert next(bends) == pytest.approx(next(bends), abs=0.1)
+
+
 def test_sharing_with_nobody_is_noted(tmp_path):
     text = STUDY.replace('name = "made"', 'name = "made"\ntags = ["a"]')
     prepared = trackfit.prepare(study_of(tmp_path, [track("a", 30, 1), track("b", 30, 2)], text))

@@ -314,7 +314,11 @@ BROKEN: tuple[tuple[str, str, str], ...] = (
     ),
     ('layer = "depth"', 'layer = "water"', "preference[1].layer: a layer with east and north is a"),
     ('layer = "depth"\n', "", 'preference[1].shape: shape "humped" needs a layer'),
-    ('"humped"', '"hump"', 'preference[1].shape: must be one of "linear", "humped", "distance"'),
+    (
+        '"humped"',
+        '"hump"',
+        'preference[1].shape: must be one of "linear", "humped", "smooth", "distance"',
+    ),
     ('"humped"', '"distance"', 'preference[1].shape: shape "distance" needs a point'),
     ('"humped"', '"humped"\nname = "sst"', "preference[1].name: a layer that the term is not made"),
     ('"humped"', '"humped"\nname = "drift"', "preference[1].name: this name is trackfit's own"),

@@ -10,13 +10,15 @@ import numpy as np
 import pandas as pd
 from jaxtyping import Float
 
+from trackfit.counted import counted
 from trackfit.errors import ErrorRules, fix_covariances
 from trackfit.faults import LayerError
 from trackfit.fixes import Fixes
 from trackfit.frame import Plane
-from trackfit.inference.fit import Fit
+from trackfit.inference.fit import MIN_FIXES, Fit
 from trackfit.inference.grid import time_grid
 from trackfit.inference.shared import Task, fit_shared
+from trackfit.inference.smoothing import revise_shared
 from trackfit.inference.task import FitSettings, TrackData
 from trackfit.judgement import FixJudgement, judge_fixes
 from trackfit.layers import Coast, Layer, LayerRequest, read_coast, read_layer
@@ -28,6 +30,9 @@ from trackfit.usable import error_rules, study_area, usable_fixes
 
 DISTORTION_WARNING = 0.02
 """Distances and directions in the plane that are further off than this are worth a warning."""
+
+FEW_FIXES = 20
+"""A tag with fewer fixes in use gets a note."""
 
 TagProgress = Callable[[str, float, str], None]
 
@@ -133,7 +138,13 @@ def prepare(study: Study) -> Prepared:
         layers=layers,
         coast=read_coast(study.coast.file, plane, box) if study.coast else None,
         model=build_model(study, used, plane),
-        notes=(*fixes.notes, *_layer_notes(study, layers), *_sharing_notes(study, fixes), *far_off),
+        notes=(
+            *fixes.notes,
+            *_few_notes(tracks),
+            *_layer_notes(study, layers),
+            *_sharing_notes(study, fixes),
+            *far_off,
+        ),
         warnings=_distortion_warning(plane, lon, lat),
     )
 
@@ -156,6 +167,16 @@ def used_layers(study: Study, layers: Mapping[str, Layer]) -> dict[str, Layer]:
     names = {p.layer for p in study.preference if p.layer}
     names |= {study.current.layer} if study.current else set()
     return {name: layer for name, layer in layers.items() if name in names}
+
+
+def _few_notes(tracks: Mapping[str, TrackData]) -> list[str]:
+    """Tell of tags whose fixes can hardly bear a fit; those that cannot have a status later."""
+    return [
+        f"tag {tag}: {counted(len(track.hours), 'fix', 'fixes')} to use are few: expect wide "
+        "intervals, and lean on the priors no more than you believe in them"
+        for tag, track in tracks.items()
+        if MIN_FIXES <= len(track.hours) < FEW_FIXES
+    ]
 
 
 def _layer_notes(study: Study, layers: Mapping[str, Layer]) -> list[str]:
@@ -198,7 +219,7 @@ def _check_fixes_covered(track: TrackData, layer: Layer, plane: Plane, *, heavy:
     """
     outside_time = ~layer.covers_time(track.hours)
     if outside_time.any():
-        first, last = times_utc(layer.hours[[0, -1]])
+        first, last = times_utc(np.array(layer.own_span_hours))
         raise LayerError(
             f"tag {track.tag}: the fix at {_stamp(track.hours[outside_time][0])} lies outside the "
             f"time of layer '{layer.name}' ({first:%Y-%m-%d %H:%M} to {last:%Y-%m-%d %H:%M} UTC, "
@@ -279,6 +300,7 @@ def fit_tracks(
             for track, hours in zip(tracks, report, strict=True)
         ],
         progress,
+        revise_shared,
     )
 
 
@@ -302,27 +324,36 @@ def _inside_layers(prepared: Prepared, fit: Fit) -> Fit:
     return fit
 
 
-def fill_tracks(prepared: Prepared, fits: Sequence[Fit]) -> list[FilledTrack]:
+def fill_tracks(
+    prepared: Prepared, fits: Sequence[Fit], progress: TagProgress = _silent
+) -> list[FilledTrack]:
     """Positions with credible ellipses of every tag that was fitted.
 
     Where the study has a coast and does not say otherwise, they keep to the sea.
     """
+    fitted = [fit for fit in fits if fit.states is not None]
+    tracks: list[FilledTrack] = []
+    for done, fit in enumerate(fitted):
+        progress("positions", done / len(fitted), f"filling tag {fit.tag}")
+        tracks.append(_filled(prepared, fit))
+    if tracks:
+        progress("positions", 1.0, f"{counted(len(tracks), 'track')} filled")
+    return tracks
+
+
+def _filled(prepared: Prepared, fit: Fit) -> FilledTrack:
     paths = prepared.study.paths
     at_sea = paths.keep_at_sea is not False
-    return [
-        fill_track(
-            fit,
-            prepared.plane,
-            prepared.tracks[fit.tag].hours,
-            interval_hours=paths.interval_hours,
-            gap_hours=paths.gap_hours,
-            draws=paths.draws,
-            seed=prepared.study.study.seed,
-            coast=prepared.coast if at_sea else None,
-        )
-        for fit in fits
-        if fit.states is not None
-    ]
+    return fill_track(
+        fit,
+        prepared.plane,
+        prepared.tracks[fit.tag].hours,
+        interval_hours=paths.interval_hours,
+        gap_hours=paths.gap_hours,
+        draws=paths.draws,
+        seed=prepared.study.study.seed,
+        coast=prepared.coast if at_sea else None,
+    )
 
 
 def preference_responses(prepared: Prepared, fits: Sequence[Fit]) -> list[Response]:

@@ -22,6 +22,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
+from trackfit.counted import counted
 from trackfit.faults import FixesError
 
 COLUMNS = (
@@ -221,10 +222,10 @@ class _Rows:
     def _notes(self, file: str) -> tuple[str, ...]:
         if not self._long_lines:
             return ()
-        return (
-            f"{file}: {len(self._long_lines)} rows run over several lines inside quotation marks, "
-            f"the first from line {self._long_lines[0]}",
-        )
+        count, first = len(self._long_lines), self._long_lines[0]
+        runs = counted(count, "row runs", "rows run")
+        where = "from line" if count == 1 else "the first from line"
+        return (f"{file}: {runs} over several lines inside quotation marks, {where} {first}",)
 
 
 def _is_blank(cells: list[str]) -> bool:

@@ -16,6 +16,7 @@ import pandas as pd
 import pyarrow as pa
 import pyarrow.compute as pc
 
+from trackfit.counted import counted
 from trackfit.faults import FixesError
 from trackfit.fix_files import COLUMNS, RawFixes, nearest, read_raw
 
@@ -71,7 +72,7 @@ class Fixes:
         return self.table[self.table["tag"] == tag].reset_index(drop=True)
 
     def setting_aside(
-        self, mask: Collection[Any], reason: str, shown: Collection[str] | None = None
+        self, mask: Collection[Any], reason: str, shown: Collection[Any] | None = None
     ) -> "Fixes":
         """Move rows of `table` to `set_aside`.
 
@@ -85,7 +86,8 @@ class Fixes:
         reason
             The rule; no colon in it.
         shown
-            What breaks the rule, to follow it after a colon, (len(table),).
+            Texts of what breaks the rule, to follow it after a colon, (len(table),); of rows that
+            stay, anything.
         """
         moves = np.asarray(mask, dtype=bool)
         if moves.shape != (len(self.table),):
@@ -350,7 +352,7 @@ def _nothing_usable(fixes: Fixes, raws: Sequence[RawFixes]) -> str:
     first = fixes.set_aside.iloc[0]
     cells = ", ".join(f"{name} {first[name]!r}" for name in _PLACE)
     return (
-        f"{files}: none of {len(fixes.set_aside)} rows is a usable fix ({reasons}); "
+        f"{files}: {_no_row(len(fixes.set_aside))} ({reasons}); "
         f"line {first['line']} reads {cells}: check the columns, the decimal mark and the delimiter"
     )
 
@@ -362,12 +364,19 @@ def _notes(raw: RawFixes, table: pd.DataFrame) -> list[str]:
         notes.append(f"{raw.file}: has no column of tags; its rows are tag {raw.stem!r}")
     usable = table[table["file"] == raw.file]
     if len(usable) == 0:
-        notes.append(f"{raw.file}: none of its {len(raw.lines)} rows is a usable fix")
+        notes.append(f"{raw.file}: {_no_row(len(raw.lines))}")
     stated = usable[_ELLIPSE].notna().sum(axis=1)
     partial = int(((stated > 0) & (stated < len(_ELLIPSE))).sum())
     if partial:
-        notes.append(f"{raw.file}: {partial} rows state a part of an ellipse; it is not used")
+        state = counted(partial, "row states", "rows state")
+        notes.append(f"{raw.file}: {state} a part of an ellipse; it is not used")
     return notes
+
+
+def _no_row(count: int) -> str:
+    return (
+        "its only row is no usable fix" if count == 1 else f"none of {count} rows is a usable fix"
+    )
 
 
 def _order_notes(table: pd.DataFrame) -> list[str]:
@@ -376,4 +385,7 @@ def _order_notes(table: pd.DataFrame) -> list[str]:
     stamps = by_line["time"].astype("int64")
     latest = stamps.groupby([by_line["file"], by_line["tag"]]).cummax()
     late = by_line["file"][stamps < latest].value_counts(sort=False)
-    return [f"{f}: {n} rows were out of time order and were sorted" for f, n in late.items()]
+    return [
+        f"{file}: {counted(count, 'row was', 'rows were')} out of time order and were sorted"
+        for file, count in late.items()
+    ]

@@ -105,7 +105,7 @@ class Plane:
                 'give a code such as "EPSG:3035"'
             ) from error
         _check_projected(text, crs)
-        return cls(crs, f"{crs.name} ({text})" if crs.name != text else text)
+        return cls(crs, _described(text, crs))
 
     def to_plane(self, lon_deg: Numbers, lat_deg: Numbers) -> Float[np.ndarray, "n 2"]:
         """Degrees (WGS 84) to kilometres in the plane, (n, 2).
@@ -335,6 +335,27 @@ def _check_projected(text: str, crs: pyproj.CRS) -> None:
         raise StudyError(f"plane.crs: {text!r} counts in {wrong[0]}, not in metres; {advice}")
     if any(axis.direction == "west" for axis in axes):
         raise StudyError(f"plane.crs: {text!r} counts westwards, not eastwards; {advice}")
+
+
+def _described(text: str, crs: pyproj.CRS) -> str:
+    """One line on a plane: its own name, or for a PROJ text, which has none, what it does."""
+    if crs.name not in ("", "unknown", "undefined"):
+        return f"{crs.name} ({text})" if crs.name != text else text
+    method = crs.coordinate_operation.method_name if crs.coordinate_operation else "a projection"
+    datum = crs.datum.name if crs.datum else ""
+    if datum.lower().startswith("unknown") or not datum:
+        datum = _ellipsoid(crs)
+    return f"{method}, {datum} ({text})"
+
+
+def _ellipsoid(crs: pyproj.CRS) -> str:
+    body = crs.ellipsoid
+    if body is None:
+        return "no stated ellipsoid"
+    if body.name in ("", "unknown"):
+        round_or_not = "sphere" if body.semi_major_metre == body.semi_minor_metre else "ellipsoid"
+        return f"{round_or_not} of {body.semi_major_metre / 1000.0:.3f} km"
+    return f"ellipsoid {body.name}"
 
 
 def _radii_m(lat_deg: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

@@ -16,7 +16,16 @@ from trackfit.inference.parameters import Parameter, ParameterSet
 from trackfit.inference.task import Model, TrackData
 from trackfit.layers.layer import Layer
 from trackfit.layers.splines import Spline, fit_spline
-from trackfit.motion import Diffusive, DistanceTerm, LayerTerm, Motion, Persistent, VelocityField
+from trackfit.motion import (
+    Diffusive,
+    DistanceTerm,
+    LayerTerm,
+    Motion,
+    Persistent,
+    SmoothTerm,
+    VelocityField,
+    fit_curve,
+)
 from trackfit.motion.terms import TermName
 from trackfit.motion.velocity import Term
 from trackfit.study import Study
@@ -108,7 +117,7 @@ def build_model(study: Study, layers: Mapping[str, Layer], plane: Plane) -> Stud
             terms.append(_distance_term(preference, plane))
             names.append(TermName(preference.term, "distance", "km"))
         else:
-            terms.append(_layer_term(preference, splines[layer.name], standards[layer.name]))
+            terms.append(_layer_term(preference, splines[layer.name], standards[layer.name], layer))
             names.append(TermName(preference.term, layer.name, layer.unit))
         behind.append(layer)
         own = _term_parameters(study, preference, layer, standards)
@@ -144,13 +153,18 @@ def _pace_prior(study: Study) -> PacePrior | None:
     return PacePrior(motion.pace_log_sd, motion.pace_hours, 2.0 * motion.pace_hours)
 
 
-def _layer_term(preference: Preference, spline: Spline, standard: Standard) -> LayerTerm:
-    return LayerTerm(
-        spline,
-        jnp.asarray(standard.centre),
-        jnp.asarray(standard.scale),
-        humped=preference.shape == "humped",
-    )
+def _layer_term(
+    preference: Preference, spline: Spline, standard: Standard, layer: Layer
+) -> LayerTerm | SmoothTerm:
+    place = jnp.asarray(standard.centre), jnp.asarray(standard.scale)
+    if preference.shape == "smooth":
+        return SmoothTerm(spline, *place, fit_curve(_standardised(layer, standard)))
+    return LayerTerm(spline, *place, humped=preference.shape == "humped")
+
+
+def _standardised(layer: Layer, standard: Standard) -> Float[np.ndarray, " n"]:
+    """The values a layer takes at its own nodes, as z."""
+    return (layer.values[:, _seen(layer), 0].ravel() - standard.centre) / standard.scale
 
 
 def _distance_term(preference: Preference, plane: Plane) -> DistanceTerm:
@@ -206,10 +220,37 @@ def _term_parameters(
         return [_amplitude(study, f"{name}.distance", "km/h", 1.0)]
     standard = standards[layer.name]
     z = (layer.values[..., 0] - standard.centre) / standard.scale
+    if preference.shape == "smooth":
+        linear = _amplitude(study, f"{name}.linear", "km^2/h", _rms_slope(z, layer))
+        return [linear, *_bends(study, name, _standardised(layer, standard), linear.reach)]
     powers = {"linear": z, "squared": z**2} if preference.shape == "humped" else {"linear": z}
     return [
         _amplitude(study, f"{name}.{power}", "km^2/h", _rms_slope(values, layer))
         for power, values in powers.items()
+    ]
+
+
+def _bends(study: Study, name: str, z: Float[np.ndarray, " n"], linear: float) -> list[Parameter]:
+    """The bends of a smooth curve; they start with slopes a third of a linear preference's.
+
+    `linear` is the slope of h in z that makes the study's typical speed. A search is surer where
+    the curve has yet to unbend than where it has to be straightened.
+    """
+    slopes = np.asarray(fit_curve(z).values(jnp.asarray(z))[1])
+    spread = linear / (3.0 * float(np.sqrt(np.sum(np.mean(slopes**2, axis=1)))))
+    return [
+        Parameter(
+            name=f"{name}.bend_{i + 1}",
+            unit="km^2/h",
+            positive=False,
+            start=0.0,
+            prior_mean=0.0,
+            prior_sd=spread,
+            reach=spread,
+            reported=False,
+            smooth=name,
+        )
+        for i in range(len(slopes))
     ]
 
 

@@ -2,17 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from functools import partial
 from pathlib import Path
 
-from trackfit.analysis import Prepared, fix_judgements, preference_responses
+from trackfit.analysis import Prepared, TagProgress, fix_judgements, preference_responses
+from trackfit.counted import counted
 from trackfit.criticism.judged import Judged, judge_fits
 from trackfit.criticism.tables import comparison_table, hold_out_table, judged_tables
 from trackfit.inference.fit import Fit
 from trackfit.judgement import FixJudgement
 from trackfit.paths import FilledTrack
-from trackfit.report import Scene, figure_writers, file_stem, residual_figure, save_figure
+from trackfit.report import Scene, figure_writers, file_stems, residual_figure, save_figure
 from trackfit.results import (
     JUDGEMENT_FILE,
     RecordInfo,
@@ -23,6 +24,10 @@ from trackfit.results import (
 from trackfit.results.write import FileWriter
 
 
+def _silent(what: str, done: float, message: str) -> None:
+    """Take no notice of progress."""
+
+
 def write_results(
     folder: Path | str,
     prepared: Prepared,
@@ -31,18 +36,22 @@ def write_results(
     *,
     judged: Judged | None = None,
     overwrite: bool = False,
+    progress: TagProgress = _silent,
 ) -> Path:
     """Write the results of a study to a folder, all at once, and return the folder.
 
-    Always `parameters.csv`, `set_aside.csv`, `fix_judgement.csv`, `responses.csv` and
-    `results.json`, `verdicts.csv` and the tables of the folder `fit`. With filled tracks also the
-    positions in the formats of `[output]` and the figures. Where the study asks for them,
-    `comparison.csv`, `hold_out.csv` and `hold_out_fixes.csv`.
+    Always `parameters.csv`, `set_aside.csv`, `fix_judgement.csv`, `verdicts.csv`, the tables of
+    the folder `fit` and `results.json`. `responses.csv` where a fitted tag has a preference term.
+    With filled tracks also the positions in the formats of `[output]`, and the figures unless the
+    study does without. Where the study asks for them, `comparison.csv`, `hold_out.csv` and
+    `hold_out_fixes.csv`.
 
     Parameters
     ----------
     judged
         What was found out about the fits (`judge_fits`); found out now if it is not given.
+    progress
+        Told of every figure drawn.
 
     Raises
     ------
@@ -64,7 +73,8 @@ def write_results(
             on_path={(r.tag, r.term): r.on_path for r in responses},
             figure_format=output.figure_format,
         )
-        figures |= _residual_figures(judged, output.figure_format)
+        stems = file_stems(prepared.fixes.tags)
+        figures |= _residual_figures(judged, stems, output.figure_format)
     return write_folder(
         Path(folder),
         tracks=tracks,
@@ -76,10 +86,25 @@ def write_results(
         extra_files={
             JUDGEMENT_FILE: partial(_write_judgements, judgements),
             **_judged_files(judged),
-            **figures,
+            **_told(figures, progress),
         },
         overwrite=overwrite,
     )
+
+
+def _told(figures: Mapping[str, FileWriter], progress: TagProgress) -> dict[str, FileWriter]:
+    """The same writers; each says when it has drawn its figure."""
+
+    def write(number: int, writer: FileWriter, path: Path) -> None:
+        writer(path)
+        last = number == len(figures)
+        words = f"{counted(number, 'figure')} drawn" if last else path.name
+        progress("figures", number / len(figures), words)
+
+    return {
+        name: partial(write, number, writer)
+        for number, (name, writer) in enumerate(figures.items(), 1)
+    }
 
 
 def _write_judgements(judgements: Sequence[FixJudgement], path: Path) -> None:
@@ -96,7 +121,9 @@ def _judged_files(judged: Judged) -> dict[str, FileWriter]:
     return {name: partial(write_table, table=table) for name, table in tables.items()}
 
 
-def _residual_figures(judged: Judged, figure_format: str) -> dict[str, FileWriter]:
+def _residual_figures(
+    judged: Judged, stems: Mapping[str, str], figure_format: str
+) -> dict[str, FileWriter]:
     figures: dict[str, FileWriter] = {}
     for criticism in judged.criticisms:
         residuals = criticism.residuals
@@ -110,8 +137,9 @@ def _residual_figures(judged: Judged, figure_format: str) -> dict[str, FileWrite
             residuals.quantiles,
             residuals.of_ahead,
             residuals.of_left_out,
+            criticism.status,
         )
-        name = f"figures/residuals_{file_stem(criticism.tag)}.{figure_format}"
+        name = f"figures/residuals_{stems[criticism.tag]}.{figure_format}"
         figures[name] = partial(save_figure, draw)
     return figures
 
@@ -121,12 +149,14 @@ def _scene(prepared: Prepared) -> Scene:
     depth = next(
         (layer for name, layer in prepared.layers.items() if "depth" in name.lower()), None
     )
-    point = next((p.point for p in prepared.study.preference if p.point), None)
+    named = next((p for p in prepared.study.preference if p.point), None)
+    point = named.point if named else None
     return Scene(
         plane=prepared.plane,
         coast=prepared.coast,
         depth=depth,
         colony_lonlat=None if point is None else (point.lon, point.lat),
+        colony_name=named.term if named else "",
     )
 
 

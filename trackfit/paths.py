@@ -11,7 +11,7 @@ import shapely
 from jaxtyping import Float
 
 from trackfit.frame import Ellipses, Plane, ellipse_from_covariance, ellipse_scale
-from trackfit.inference.fit import Fit
+from trackfit.inference.fit import Fit, FitStatus
 from trackfit.inference.grid import nearest_state
 from trackfit.layers.layer import Coast
 from trackfit.sea.at_sea import Kept, Trouble, keep_at_sea
@@ -37,6 +37,8 @@ class FilledTrack:
     draw_times
         Times of the drawn paths: those of the table, and more where straight lines between those
         would cross land.
+    fit_status
+        How the fit ended; positions of a fit that is not `ok` are there to be looked at.
     warnings
         Sentences on where fixes and coast do not go together.
     """
@@ -45,6 +47,7 @@ class FilledTrack:
     table: pd.DataFrame
     draws_lonlat: Float[np.ndarray, "draws times 2"]
     draw_times: pd.DatetimeIndex
+    fit_status: FitStatus
     warnings: tuple[str, ...] = ()
 
 
@@ -129,6 +132,7 @@ def fill_track(
         table=table,
         draws_lonlat=_lonlat(plane, kept.draws_km[:, vertices]),
         draw_times=times_utc(grid[vertices]),
+        fit_status=fit.status,
         warnings=tuple(_warning(fit.tag, trouble, grid) for trouble in kept.troubles),
     )
 

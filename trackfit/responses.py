@@ -9,9 +9,9 @@ import numpy as np
 from jaxtyping import Float
 
 from trackfit.inference.estimates import NORMAL_95
-from trackfit.inference.fit import Fit
+from trackfit.inference.fit import Fit, FitStatus
 from trackfit.layers.splines import spline_jet
-from trackfit.motion import LayerTerm
+from trackfit.motion import DistanceTerm, SmoothTerm
 from trackfit.motion.terms import TermName
 
 POINTS = 101
@@ -34,6 +34,8 @@ class Response:
         Pointwise 95 % band from the parameters' covariance.
     on_path
         The layer's values along the fitted path.
+    fit_status
+        How the fit ended.
     """
 
     tag: str
@@ -45,6 +47,7 @@ class Response:
     lower95: Float[np.ndarray, " m"]
     upper95: Float[np.ndarray, " m"]
     on_path: Float[np.ndarray, " n"]
+    fit_status: FitStatus
 
 
 def responses_of(fit: Fit, names: tuple[TermName, ...]) -> list[Response]:
@@ -115,6 +118,7 @@ def _response(
         lower95=h - NORMAL_95 * sd,
         upper95=h + NORMAL_95 * sd,
         on_path=on_path,
+        fit_status=fit.status,
     )
 
 
@@ -123,7 +127,7 @@ def _along_path(fit: Fit, slot: int) -> Float[np.ndarray, " n"]:
     term = fit.model.field.terms[slot]
     problem = fit.states.problem
     x, y = fit.states.positions_km().T
-    if not isinstance(term, LayerTerm):
+    if isinstance(term, DistanceTerm):
         point = np.asarray(term.point_km)
         return np.hypot(x - point[0], y - point[1])
     when = problem.track.times.terms[slot]
@@ -133,9 +137,12 @@ def _along_path(fit: Fit, slot: int) -> Float[np.ndarray, " n"]:
 
 def _basis(fit: Fit, slot: int, at: Float[np.ndarray, " m"]) -> Float[np.ndarray, "m amplitudes"]:
     term = fit.model.field.terms[slot]
-    if not isinstance(term, LayerTerm):
+    if isinstance(term, DistanceTerm):
         return at[:, None]
     z = (at - float(term.centre)) / float(term.scale)
+    if isinstance(term, SmoothTerm):
+        bends = np.asarray(term.curve.values(z)[0] - term.curve.values(np.zeros(1))[0])
+        return np.column_stack([z, bends.T])
     return np.stack([z, z**2], axis=1) if term.humped else z[:, None]
 
 

@@ -194,10 +194,11 @@ class Preference(Table):
     )
     layer: Text | None = setting(None, "The layer the term is made of.")
     point: Point | None = setting(None, "Or the place whose distance the term uses.")
-    shape: Literal["linear", "humped", "distance"] = setting(
+    shape: Literal["linear", "humped", "smooth", "distance"] = setting(
         ...,
         "`linear`: the more the better, or the worse. `humped`: a best value with less on both "
-        "sides. `distance`: towards or away from a point.",
+        "sides. `smooth`: a curve, as wiggly as the fixes ask for. `distance`: towards or away "
+        "from a point.",
     )
     shared: bool = setting(
         False,
@@ -331,8 +332,10 @@ class Paths(Table):
     draws: int = setting(20, "Number of possible paths to draw for each tag.", ge=0, le=10_000)
     keep_at_sea: bool | None = setting(
         None,
-        "Keep positions and drawn paths off the land of `[coast]`: no position stands on it, no "
-        "drawn path crosses it. `false` for animals that fly or haul out.",
+        "Keep positions and drawn paths off the land of `[coast]`, as far as fixes and land leave "
+        "a way by sea; where they leave none, a warning says when, and the path there is the one "
+        "without a coast. Positions, ellipses and draws are changed, not the parameters. `false` "
+        "for animals that fly or haul out.",
         shown="true where there is a `[coast]`",
     )
 

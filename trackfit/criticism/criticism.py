@@ -18,9 +18,10 @@ from trackfit.criticism.error_sizes import ErrorSize, error_size, factor_of_kind
 from trackfit.criticism.residuals import Beside, Residuals, residuals_of
 from trackfit.errors import error_kinds
 from trackfit.inference.fit import Fit, FitStatus
+from trackfit.inference.smoothing import effective_bends, smooth_groups
 from trackfit.inference.states import States
 from trackfit.inference.task import TrackData
-from trackfit.motion import LayerTerm
+from trackfit.motion import DistanceTerm
 from trackfit.motion.terms import TermName
 from trackfit.usable import error_rules
 
@@ -36,7 +37,8 @@ class Scores:
     fixes
         n: the fixes used. The two coordinates of a fix count as one.
     estimated
-        k: the parameters that were estimated; those held fixed do not count.
+        k: the parameters that were estimated; those held fixed do not count, and the bends of a
+        smooth term count as many as the data tell.
     log_marginal
         Logarithm of the marginal likelihood (fixes in km) at the estimates. Where the pace varies
         it is averaged over the paces by Laplace's method.
@@ -49,7 +51,7 @@ class Scores:
     """
 
     fixes: int
-    estimated: int
+    estimated: float
     log_marginal: float
     aic: float
     aicc: float
@@ -225,14 +227,25 @@ def _nothing(fit: Fit) -> Criticism:
 def scores_of(fit: Fit, leave_one_out: float) -> Scores:
     """The scores of a fitted track."""
     assert fit.states is not None
-    k = len(fit.model.parameters.free)
+    k = effective_number(fit)
     log_marginal = float(fit.log_marginal) + _average_over_spells(fit.states)
     aic = information_criterion(log_marginal, k)
     corrected = information_criterion(log_marginal, k, fit.n_fixes)
     return Scores(fit.n_fixes, k, log_marginal, aic, corrected, leave_one_out)
 
 
-def information_criterion(log_likelihood: float, estimated: int, size: int | None = None) -> float:
+def effective_number(fit: Fit) -> float:
+    """Parameters that were estimated; of the bends of a smooth term those that the data tell."""
+    assert fit.states is not None
+    parameters = fit.model.parameters
+    told = effective_bends(parameters, fit.states.theta_covariance)
+    held = sum(len(at) for at in smooth_groups(parameters).values())
+    return len(parameters.free) - held + sum(told.values())
+
+
+def information_criterion(
+    log_likelihood: float, estimated: float, size: int | None = None
+) -> float:
     """Akaike's criterion, corrected for the size of the sample if it is given.
 
     Examples
@@ -296,7 +309,7 @@ def effects_of(fit: Fit, names: Sequence[TermName]) -> list[Effect]:
         first += term.n_amplitudes
         amplitudes, covariance = _amplitudes(fit, places)
         shared = fit.model.parameters.all[places[0]].shared
-        if not isinstance(term, LayerTerm):
+        if isinstance(term, DistanceTerm):
             effect = _effect(name.term, "distance", amplitudes, covariance)
             found.append(replace(effect, shared=shared))
             continue

@@ -33,6 +33,9 @@ STEP = 0.05
 
 LARGEST_FACTOR = 100.0
 
+NOTHING_KNOWN = (0.0, 3.0)
+"""Log factor and its sd where neither a step nor a second fit tells anything."""
+
 
 class Basis(Enum):
     """What a factor rests on."""
@@ -70,9 +73,10 @@ def error_size(fit: Fit, data: TrackData) -> ErrorSize | None:
         at = free_at.index(place)
         sd = float(np.sqrt(fit.states.theta_covariance[at, at]))
         return _sized(float(fit.states.theta[at]), sd, Basis.ESTIMATED)
-    step, sd = _newton_step(fit, place)
+    curved = _newton_step(fit, place)
+    step, sd = curved or NOTHING_KNOWN
     # with heavy tails a second fit is dear, and scale and tails go half for the same thing
-    if abs(step) < SUSPECT_Z * sd or fit.model.heavy:
+    if (curved is not None and abs(step) < SUSPECT_Z * sd) or fit.model.heavy:
         return _sized(step, sd, Basis.ONE_STEP)
     freed = _with_scale_free(fit, data, place)
     if freed.states is None or not freed.status.ok:
@@ -80,7 +84,9 @@ def error_size(fit: Fit, data: TrackData) -> ErrorSize | None:
     at = list(freed.states.free_at).index(place)
     change = float(freed.states.theta[at] - fit.states.approximation.theta[place])
     size = _sized(change, float(np.sqrt(freed.states.theta_covariance[at, at])), Basis.FREED)
-    return replace(size, p_value=max(size.p_value, _p_value(step / sd)), freed=freed)
+    if curved is not None:
+        size = replace(size, p_value=max(size.p_value, _p_value(step / sd)))
+    return replace(size, freed=freed)
 
 
 def _sized(log_factor: float, sd: float, basis: Basis) -> ErrorSize:
@@ -94,12 +100,11 @@ def _p_value(z: float) -> float:
     return float(2.0 * norm.sf(abs(z)))
 
 
-def _newton_step(fit: Fit, place: int) -> tuple[float, float]:
+def _newton_step(fit: Fit, place: int) -> tuple[float, float] | None:
     """Step in the log scale to the top of the likelihood, all free parameters following; its sd.
 
     With g the gradient of the negative log posterior and H its Hessian, the step is -g_s / c with
-    c = H_ss - H_sf inv(H_ff) H_fs. Where c is not positive the curvature says nothing; the step is
-    then a whole unit downhill, steep enough to have the scale set free.
+    c = H_ss - H_sf inv(H_ff) H_fs. None where c is not positive: the curvature then says nothing.
     """
     states = fit.states
     assert states is not None
@@ -111,13 +116,13 @@ def _newton_step(fit: Fit, place: int) -> tuple[float, float]:
             for sign in (1.0, -1.0)
         )
     except ModeNotFound:
-        return 0.0, 1.0
+        return None
     column = (up - down) / (2.0 * STEP)
     across = column[states.free_at]
     curvature = float(column[place] - across @ states.theta_covariance @ across)
     slope = float(found.gradient()[place])
     if not np.isfinite(curvature) or curvature <= 0.0:
-        return (-float(np.sign(slope)), 0.1) if np.isfinite(slope) else (0.0, 1.0)
+        return None
     return -slope / curvature, curvature**-0.5
 
 

@@ -20,6 +20,7 @@ import pandas as pd
 from jaxtyping import Bool, Float, Int
 
 from trackfit.analysis import Prepared, TagProgress, fit_tracks
+from trackfit.counted import counted
 from trackfit.frame import Plane, geodesic_km
 from trackfit.inference.fit import MIN_FIXES, Fit, FitStatus
 from trackfit.inference.grid import nearest_state
@@ -336,7 +337,7 @@ def _sentence(
         return f"Nothing hidden: too few fixes ({kept}), or blocks too long for the track."
     warning = "" if status is None or status.ok else f" {status.sentence}"
     return (
-        f"Of {hidden} hidden fixes, 50 % regions hold {100.0 * shares[0.5]:.0f} % and 95 % regions "
-        f"{100.0 * shares[0.95]:.0f} %; median error {errors[0]:.3g} km (linear interpolation "
-        f"{linear[0]:.3g} km).{warning}"
+        f"Of {counted(hidden, 'hidden fix', 'hidden fixes')}, 50 % regions hold "
+        f"{100.0 * shares[0.5]:.0f} % and 95 % regions {100.0 * shares[0.95]:.0f} %; median error "
+        f"{errors[0]:.3g} km (linear interpolation {linear[0]:.3g} km).{warning}"
     )

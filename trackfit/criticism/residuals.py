@@ -176,7 +176,7 @@ def _by_kind(
 
 def share_far(residual: Float[np.ndarray, "*draws fixes 2"]) -> Float[np.ndarray, "*draws"]:
     """Share of residuals, both axes, beyond `FAR`."""
-    return np.mean(np.abs(residual) > FAR, axis=(-2, -1))
+    return np.asarray(np.mean(np.abs(residual) > FAR, axis=(-2, -1)))
 
 
 def kurtosis(residual: Float[np.ndarray, "*draws fixes 2"]) -> Float[np.ndarray, "*draws"]:
@@ -219,8 +219,8 @@ def autocorrelation_beside(
 ) -> Autocorrelation:
     """Autocorrelation of residuals beside that of drawn ones."""
     lags = _lags(len(residual))
-    value = np.array([float(autocorrelation(residual, lag)) for lag in lags])
-    of_drawn = np.array([autocorrelation(drawn, lag) for lag in lags])
+    value = np.array([float(autocorrelation(residual, int(lag))) for lag in lags])
+    of_drawn = np.array([autocorrelation(drawn, int(lag)) for lag in lags])
     of_drawn = of_drawn.reshape(len(lags), len(drawn))
     low, high = np.quantile(of_drawn, [0.025, 0.975], axis=1)
     return Autocorrelation(lags, value, of_drawn.mean(axis=1), low, high)
@@ -234,7 +234,7 @@ def white_autocorrelation(residual: Float[np.ndarray, "fixes 2"]) -> Autocorrela
     """
     n = len(residual)
     lags = _lags(n)
-    value = np.array([float(autocorrelation(residual, lag)) for lag in lags])
+    value = np.array([float(autocorrelation(residual, int(lag))) for lag in lags])
     half = norm.ppf(0.975) * _white_sd(lags, n)
     return Autocorrelation(lags, value, np.zeros(len(lags)), -half, half)
 

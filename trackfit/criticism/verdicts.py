@@ -12,6 +12,7 @@ from enum import Enum
 
 import numpy as np
 
+from trackfit.counted import counted
 from trackfit.criticism.criticism import DRIFT, Criticism, Effect, ParameterPair
 from trackfit.criticism.error_sizes import Basis
 from trackfit.criticism.residuals import Beside
@@ -125,7 +126,8 @@ def _enough(criticism: Criticism) -> bool:
 
 def _too_little(criticism: Criticism) -> Findings:
     fixes = criticism.scores.fixes
-    why = f"{fixes} fixes are too few" if fixes < LEAST_FIXES else "all fixes are at one place"
+    few = f"{counted(fixes, 'fix is', 'fixes are')} too few"
+    why = few if fixes < LEAST_FIXES else "all fixes are at one place"
     sentence = f"Errors, tails and motion cannot be judged: {why}."
     yield "residuals", Finding.UNTOLD, float("nan"), sentence
 
@@ -211,8 +213,8 @@ def _kinds(criticism: Criticism) -> Findings:
             f"errors of {kind}",
             finding,
             factor,
-            f"By its {of_kind.fixes} fixes of this kind alone, the {words} {look} too {size} by a "
-            f"factor of about {_plain(times)}.",
+            f"By its {counted(of_kind.fixes, 'fix', 'fixes')} of this kind alone, the {words} "
+            f"{look} too {size} by a factor of about {_plain(times)}.",
         )
 
 

@@ -20,7 +20,7 @@ of tries stays where it was, which leaves the target as it is too.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import NamedTuple, Protocol
+from typing import NamedTuple, Protocol, runtime_checkable
 
 import numpy as np
 from jaxtyping import Bool, Float, Int
@@ -33,6 +33,7 @@ MAX_SHRINKS = 10
 MEND_ROUNDS = 8
 
 
+@runtime_checkable
 class Bounds(Protocol):
     """Where paths may go."""
 
@@ -261,7 +262,7 @@ def _block_weight(
     at = paths.centre[path, state] + deviation[path, state]
     flat = path * layout.blocks + layout.block[state]
     weight = np.bincount(flat, bounds.log_weight(at, state), minlength=which.size)
-    return weight.reshape(which.shape)
+    return weight.astype(float).reshape(which.shape)
 
 
 def mend(

@@ -8,6 +8,7 @@ from jaxtyping import Float
 
 from trackfit.inference.integrate import WeightedPoints
 from trackfit.inference.parameters import Parameter, ParameterSet
+from trackfit.inference.smoothing import effective_bends
 from trackfit.motion import Motion
 
 NORMAL_95 = 1.959963984540054
@@ -25,7 +26,8 @@ def parameter_table(
     From weighted points: posterior means on the engine's scale, turned to the reported one (of a
     positive parameter its median, nearly), and weighted quantiles. Else the mode, with intervals
     normal on the engine's scale. Shared parameters are of that kind always: one tag's points know
-    nothing of how the others see them.
+    nothing of how the others see them. For a smooth term there is a row with the number of bends
+    that the data tell.
     """
     free_at, size = parameters.free_at, len(parameters.all)
     names = [
@@ -50,6 +52,8 @@ def parameter_table(
             spread = float(np.sqrt(points.weight @ (values - value) ** 2))
             interval = (points.quantile(values, 0.025), points.quantile(values, 0.975))
         rows.append(_row(name, unit, positive, value, spread, interval, role))
+    for name, bends in effective_bends(parameters, covariance).items():
+        rows.append(_row(f"{name}.bends", "1", False, bends, 0.0, (bends, bends), "chosen"))
     return pd.DataFrame(rows)
 
 

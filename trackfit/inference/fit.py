@@ -13,7 +13,7 @@ of the exact gradient. It is carried into the states to first order:
 from __future__ import annotations
 
 import zlib
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
 from enum import Enum
 
@@ -26,6 +26,7 @@ from trackfit.inference.integrate import PathMixture, WeightedPoints, lay_points
 from trackfit.inference.laplace import mode_sensitivity
 from trackfit.inference.optimise import Minimum, Rejected, nearest_positive
 from trackfit.inference.search import TOLERANCE, Search
+from trackfit.inference.smoothing import settle
 from trackfit.inference.states import States
 from trackfit.inference.task import FitSettings, Model, TrackData
 
@@ -48,9 +49,12 @@ class FitStatus(Enum):
         "The track does not determine every parameter; the intervals of those at fault are not to "
         "be trusted. Fix one, drop a term, or use the weak priors."
     )
+    NO_CURVATURE = (
+        "The search settled, but how well the parameters are known could not be computed there; "
+        "intervals and ellipses are not to be trusted."
+    )
     NO_MODE = (
-        "No most probable path was found at the starting values; check the fixes and their errors, "
-        "or use a shorter step."
+        "No most probable path was found; check the fixes and their errors, or use a shorter step."
     )
     NOT_SETTLED = (
         "The tags had not agreed on the responses they share when the sweeps over them ended; "
@@ -77,7 +81,7 @@ class Fit:
     ----------
     parameters
         One row a parameter: parameter, unit, estimate, sd, lower95, upper95, role (estimated,
-        shared by all tags, fixed, or derived from others).
+        shared by all tags, fixed, derived from others, or chosen: the bends of a smooth term).
     log_marginal
         Laplace log marginal likelihood of the fixes (in km) at the estimates, priors left out.
     step_check
@@ -102,8 +106,8 @@ class Fit:
 
 Progress = Callable[[float, str], None]
 
-Begin = tuple[Float[np.ndarray, " free"], Float[np.ndarray, "free free"]]
-"""Where a search begins: the free parameters, and a first guess of the Hessian there."""
+Start = tuple[Float[np.ndarray, " free"], Float[np.ndarray, "free free"]]
+"""Where a search begins: parameters, and a first guess of the Hessian."""
 
 
 def _silent(done: float, message: str) -> None:
@@ -116,7 +120,7 @@ def fit_track(
     settings: FitSettings,
     report_hours: Float[np.ndarray, " n"],
     progress: Progress = _silent,
-    begin: Begin | None = None,
+    begin: Start | None = None,
 ) -> Fit:
     """Fit a model to one track by the fast engine.
 
@@ -125,29 +129,53 @@ def fit_track(
     """
     if len(data.hours) < MIN_FIXES:
         return _empty(data, model, settings, FitStatus.TOO_FEW_FIXES)
-    coarse_step = settings.step_hours * settings.coarse_factor
-    fine = Search(data, model, settings.step_hours, report_hours)
-    free = fine.parameters.free
-    start = np.array([p.start for p in free])
-    metric = np.diag([p.reach**-2.0 for p in free])
+    search = Search(data, model, settings.step_hours, report_hours)
+    starts = _starts(search, data, model, settings, progress) if begin is None else iter([begin])
+    found = _searched(search, starts, settings, progress)
+    if found is None:
+        return _empty(data, model, settings, FitStatus.NO_MODE)
+    found = settle(search, found, settings.max_iterations)
+    progress(0.6, "uncertainty")
+    ending = _ending(search, found)
     try:
-        if begin is not None:
-            start, metric = begin
-        elif settings.coarse_factor > 1:
-            coarse = Search(data, model, coarse_step, np.zeros(0))
-            found = coarse.run(start, metric, settings.max_iterations, _part(progress, 0.0, 0.3))
-            start, metric = found.at, coarse.metric(found)
-        found = fine.run(start, metric, settings.max_iterations, _part(progress, 0.3, 0.6))
-        progress(0.6, "uncertainty")
-        hessian = fine.hessian(found)
+        fit = _conclude(data, model, settings, search, found, ending, progress)
     except Rejected:
         return _empty(data, model, settings, FitStatus.NO_MODE)
-    fit = _conclude(data, model, settings, fine, found, hessian, progress)
-    if settings.step_check and fit.states is not None:
+    if settings.step_check:
         progress(0.8, "half the step")
-        fit = _with_step_check(fit, data, settings, report_hours, hessian)
+        fit = _with_step_check(fit, data, settings, report_hours, ending.hessian)
     progress(1.0, "done")
     return fit
+
+
+def _starts(
+    search: Search, data: TrackData, model: Model, settings: FitSettings, progress: Progress
+) -> Iterator[Start]:
+    """What the coarse grid found, if it found anything; then the model's own starting values."""
+    free = search.parameters.free
+    plain = np.array([p.start for p in free]), np.diag([p.reach**-2.0 for p in free])
+    if settings.coarse_factor > 1:
+        coarse = Search(data, model, settings.step_hours * settings.coarse_factor, np.zeros(0))
+        try:
+            found = coarse.run(*plain, settings.max_iterations, _part(progress, 0.0, 0.3))
+            found = settle(coarse, found, settings.max_iterations)
+            search.parameters = coarse.parameters
+            yield found.at, coarse.metric(found)
+        except Rejected:
+            pass
+    yield plain
+
+
+def _searched(
+    search: Search, starts: Iterator[Start], settings: FitSettings, progress: Progress
+) -> Minimum | None:
+    """Where the search ended from the first start that has a value; None where none has."""
+    for start, metric in starts:
+        try:
+            return search.run(start, metric, settings.max_iterations, _part(progress, 0.3, 0.6))
+        except Rejected:
+            continue
+    return None
 
 
 def _part(progress: Progress, begin: float, end: float) -> Callable[[int, float], None]:
@@ -159,24 +187,50 @@ def _part(progress: Progress, begin: float, end: float) -> Callable[[int, float]
     return report
 
 
+@dataclass(frozen=True)
+class _Ending:
+    """How a search ended, and a positive definite Hessian there."""
+
+    status: FitStatus
+    hessian: Float[np.ndarray, "free free"]
+
+
+def _ending(search: Search, found: Minimum) -> _Ending:
+    """Judge where a search ended by the curvature there."""
+    reach = np.array([p.reach for p in search.parameters.free])
+    settled = found.converged
+    try:
+        hessian = search.hessian(found)
+    except Rejected:
+        stand_in = nearest_positive(found.metric, reach**-2.0)
+        status = FitStatus.NO_CURVATURE if settled else FitStatus.NOT_CONVERGED
+        return _Ending(status, stand_in)
+    if np.linalg.eigvalsh(hessian * np.outer(reach, reach))[0] < LEAST_CURVATURE:
+        status = FitStatus.NOT_IDENTIFIED if settled else FitStatus.NOT_CONVERGED
+        return _Ending(status, nearest_positive(hessian, reach**-2.0))
+    return _Ending(FitStatus.CONVERGED if settled else FitStatus.NOT_CONVERGED, hessian)
+
+
 def _conclude(
     data: TrackData,
     model: Model,
     settings: FitSettings,
     search: Search,
     found: Minimum,
-    hessian: Float[np.ndarray, "free free"],
+    ending: _Ending,
     progress: Progress,
 ) -> Fit:
-    problem, parameters = search.problem, search.parameters
+    """The fit with its states.
+
+    Raises
+    ------
+    Rejected
+        The states at the estimates were not found again.
+    """
+    problem, parameters, status = search.problem, search.parameters, ending.status
     free_at = parameters.free_at
-    best = search.at(found.at)
-    status = FitStatus.CONVERGED if found.converged else FitStatus.NOT_CONVERGED
-    reach = np.array([p.reach for p in parameters.free])
-    if np.linalg.eigvalsh(hessian * np.outer(reach, reach))[0] < LEAST_CURVATURE:
-        status = FitStatus.NOT_IDENTIFIED if found.converged else status
-        hessian = nearest_positive(hessian, reach**-2.0)
-    covariance = np.linalg.inv(hessian)
+    best = search.with_spread(found.at)
+    covariance = np.linalg.inv(ending.hessian)
     blocks = best.spread.steps.covariance
     states = States(
         approximation=best,
@@ -187,7 +241,10 @@ def _conclude(
         theta_covariance=covariance,
     )
     if settings.points:
-        states = _with_points(search, states, settings.points, progress)
+        try:
+            states = _with_points(search, states, settings.points, progress)
+        except Rejected:
+            status = FitStatus.NO_CURVATURE if status.ok else status
     return Fit(
         tag=data.tag,
         status=status,
@@ -199,7 +256,7 @@ def _conclude(
         iterations=found.iterations,
         evaluations=search.evaluations,
         step_check=None,
-        model=model,
+        model=replace(model, parameters=parameters.first(len(model.parameters.all))),
         states=states,
     )
 
@@ -232,7 +289,13 @@ def _with_step_check(
 
 
 def _with_points(search: Search, states: States, count: int, progress: Progress) -> States:
-    """Weighted points for the parameters' posterior, with the positions at each."""
+    """Weighted points for the parameters' posterior, with the positions at each.
+
+    Raises
+    ------
+    Rejected
+        The density has no value at the mode, or at none of the points.
+    """
 
     def log_density(free: Float[np.ndarray, " free"]) -> float:
         return -search.value(free)
@@ -245,12 +308,15 @@ def _with_points(search: Search, states: States, count: int, progress: Progress)
         progress(0.7 + 0.3 * i / count, "weighing parameters")
         try:
             log_weight[i] = log_density(point) - log_design[i]
-            found = search.at(point)
+            found = search.with_spread(point)
         except Rejected:
-            found = states.approximation
+            log_weight[i], found = -np.inf, states.approximation
         means.append((found.mode.states + found.spread.adjoint)[:, :2])
         blocks = np.asarray(found.spread.steps.covariance)[:2, :2, :n]
         covariances.append(np.moveaxis(blocks, -1, 0))
+    log_weight[~np.isfinite(log_weight)] = -np.inf
+    if np.isneginf(log_weight).all():
+        raise Rejected
     weight = normalised(log_weight)
     return replace(
         states,

@@ -20,7 +20,7 @@ from dataclasses import dataclass
 
 import jax.numpy as jnp
 import numpy as np
-from jaxtyping import Float
+from jaxtyping import Float, Int
 
 from trackfit.inference.banded import Cholesky, NotPositiveDefinite, factor, reversed_band
 from trackfit.inference.derivatives import (
@@ -43,10 +43,25 @@ The states are then a ten-thousandth of their joint standard deviation from the 
 """
 
 MAX_HALVINGS = 25
+MODE_HALVINGS = 150
+"""Halvings of Newton steps after which a mode is given up: searches that find one need some ten."""
 
 
 class ModeNotFound(Exception):
     """No mode of the states was found at these parameters; the step that asked is rejected."""
+
+
+class Patience:
+    """How often the steps towards one mode may still be halved."""
+
+    def __init__(self, halvings: int = MODE_HALVINGS) -> None:
+        self.left = halvings
+
+    def spend(self) -> None:
+        """Take one halving from what is left."""
+        self.left -= 1
+        if self.left < 0:
+            raise ModeNotFound(f"steps were halved more than {MODE_HALVINGS} times")
 
 
 @dataclass(frozen=True)
@@ -76,7 +91,7 @@ class Spread:
     steps: StepSpread
     adjoint: Float[np.ndarray, "states dim"]
 
-    def covariance_at(self, states: Float[np.ndarray, " n"]) -> Float[np.ndarray, "n 2 2"]:
+    def covariance_at(self, states: Int[np.ndarray, " n"]) -> Float[np.ndarray, "n 2 2"]:
         """Covariance of the position at some states."""
         return np.moveaxis(np.asarray(self.steps.covariance)[:2, :2, states], -1, 0)
 
@@ -101,6 +116,7 @@ def find_mode(
     point = evaluate_at(problem, theta, start, basis)
     if not np.isfinite(point.value):
         raise ModeNotFound("the density is not finite at the start")
+    patience = Patience()
     for iteration in range(MAX_NEWTON):
         band, cholesky, exact = factored(problem, point, sites)
         gradient = point.full_gradient(problem, sites)
@@ -112,7 +128,7 @@ def find_mode(
             if not exact:
                 raise ModeNotFound("the Hessian is indefinite where the gradient vanishes")
             return Mode(theta, point, sites, band, cholesky, iteration)
-        point = line_search(problem, theta, sites, point, step, decrement)
+        point = line_search(problem, theta, sites, point, step, decrement, patience)
     raise ModeNotFound(f"Newton's method did not settle in {MAX_NEWTON} steps")
 
 
@@ -133,6 +149,7 @@ def line_search(
     point: Point,
     step: Float[np.ndarray, "states dim"],
     decrement: float,
+    patience: Patience,
 ) -> Point:
     """Walk along a Newton step until the density has fallen enough (Armijo's rule)."""
     value = point.density(problem, sites)
@@ -143,6 +160,7 @@ def line_search(
         trial = evaluate_at(problem, theta, point.states + length * step)
         if trial.density(problem, sites) <= value - 1e-4 * length * decrement + noise:
             return trial
+        patience.spend()
         length *= 0.5
     raise ModeNotFound("no step downhill was found")
 

@@ -20,6 +20,7 @@ from trackfit.inference.laplace import (
     DECREMENT_TOLERANCE,
     Mode,
     ModeNotFound,
+    Patience,
     Spread,
     factored,
     find_mode,
@@ -243,7 +244,7 @@ def _propagate(
     point = evaluate_at(problem, theta, warm.states, warm.basis)
     if not np.isfinite(point.value):
         raise ModeNotFound("the density is not finite at the start")
-    sweeps, mixer = 0, SiteMixer()
+    sweeps, mixer, patience = 0, SiteMixer(), Patience()
     for rounds in range(MAX_ROUNDS):
         sites, band, cholesky, exact = _factored(problem, point, sites)
         spread = spread_around(problem, theta, point, band, cholesky)
@@ -271,7 +272,7 @@ def _propagate(
             spread = spread_around(problem, theta, point, band, cholesky)
             mode = Mode(theta, point, sites, band, cholesky, rounds)
             return Approximation(problem, mode, spread, cavity, moments, sweeps)
-        point = _step(problem, theta, sites, point)
+        point = _step(problem, theta, sites, point, patience)
     raise ModeNotFound(f"the sites did not settle in {MAX_ROUNDS} rounds")
 
 
@@ -297,10 +298,12 @@ def _moved(moments: Tilted, mean: np.ndarray, covariance: np.ndarray, cavity: Ca
     return float(change[cavity.sound].max(initial=0.0))
 
 
-def _step(problem: TrackProblem, theta: np.ndarray, sites: Sites, point: Point) -> Point:
+def _step(
+    problem: TrackProblem, theta: np.ndarray, sites: Sites, point: Point, patience: Patience
+) -> Point:
     """One Newton step of the states with the sites held."""
     _, cholesky, _ = factored(problem, point, sites)
     gradient = point.full_gradient(problem, sites)
     step = -cholesky.solve(gradient.reshape(-1)).reshape(gradient.shape)
     decrement = -float(np.sum(gradient * step))
-    return line_search(problem, theta, sites, point, step, decrement)
+    return line_search(problem, theta, sites, point, step, decrement, patience)

@@ -16,6 +16,11 @@ Vector = Float[np.ndarray, " parameters"]
 Square = Float[np.ndarray, "parameters parameters"]
 
 MAX_HALVINGS = 12
+MAX_REJECTED = 40
+"""Points without a value after which a search ends: one that converges meets a few at most."""
+
+MAX_IDLE = 3
+"""Steps in a row that gain no more than rounding: there is nothing left to gain."""
 
 STEP_HEIGHT = 1e-3
 """A search that can go no further down has settled where the promised gain is below: four
@@ -74,7 +79,7 @@ def minimise(
     value, gradient = function(at)
     if not _finite(value, gradient):
         raise Rejected
-    decrement = np.inf
+    decrement, idle, budget = np.inf, 0, _Budget()
     for iteration in range(max_iterations):
         try:
             step = -np.linalg.solve(metric, gradient)
@@ -86,16 +91,31 @@ def minimise(
         if decrement < tolerance:
             return Minimum(at, value, gradient, metric, decrement, iteration, True)
         step = step / max(1.0, float(np.max(np.abs(step) / reach)))
-        found = _backtrack(function, at, value, gradient, step)
+        spent = idle == MAX_IDLE
+        found = None if spent else _backtrack(function, at, value, gradient, step, budget)
         if found is None:
             # the marginal likelihood has tiny steps where a path crosses from cell to cell of a
             # layer: near its minimum no descent may be left to find
             settled = decrement < STEP_HEIGHT
             return Minimum(at, value, gradient, metric, decrement, iteration, settled)
-        moved, value, new_gradient = found
+        moved, new_value, new_gradient = found
+        idle = idle + 1 if new_value > value - _noise(value) else 0
+        value = new_value
         metric = _updated(metric, moved - at, new_gradient - gradient)
         at, gradient = moved, new_gradient
     return Minimum(at, value, gradient, metric, decrement, max_iterations, False)
+
+
+@dataclass
+class _Budget:
+    """How many rejected points a search may still meet."""
+
+    left: int = MAX_REJECTED
+
+
+def _noise(value: float) -> float:
+    """What values differ by at rounding."""
+    return 1e-10 * (1.0 + abs(value))
 
 
 def _backtrack(
@@ -104,6 +124,7 @@ def _backtrack(
     value: float,
     gradient: Vector,
     step: Vector,
+    budget: _Budget,
 ) -> tuple[Vector, float, Vector] | None:
     slope = float(gradient @ step)
     length = 1.0
@@ -112,10 +133,13 @@ def _backtrack(
         try:
             new_value, new_gradient = function(trial)
         except Rejected:
+            budget.left -= 1
+            if budget.left <= 0:
+                return None
             length *= 0.25
             continue
-        noise = 1e-10 * (1.0 + abs(value))
-        if _finite(new_value, new_gradient) and new_value <= value + 1e-4 * length * slope + noise:
+        ceiling = value + 1e-4 * length * slope + _noise(value)
+        if _finite(new_value, new_gradient) and new_value <= ceiling:
             return trial, new_value, new_gradient
         length *= 0.5
     return None

@@ -17,7 +17,9 @@ class Parameter:
     parameter keeps its start.
 
     `reach` is the longest change the search makes in one step; one that is not `reported` has no
-    row in the table of parameters. A `shared` one has the same value for all tags of a study.
+    row in the table of parameters. `smooth` names the curve whose bend it is: its prior sd is then
+    chosen by the fit (`trackfit.inference.smoothing`). A `shared` one has the same value for all
+    tags of a study.
     """
 
     name: str
@@ -29,6 +31,7 @@ class Parameter:
     reach: float
     fixed: bool = False
     reported: bool = True
+    smooth: str | None = None
     shared: bool = False
 
 
@@ -94,6 +97,10 @@ class ParameterSet:
     def places(self, at: Int[np.ndarray, " some"]) -> Int[np.ndarray, " some"]:
         """Where free parameters, given by their places in the full vector, stand among the free."""
         return np.searchsorted(self.free_at, at)
+
+    def first(self, count: int) -> ParameterSet:
+        """The set of the first parameters."""
+        return replace(self, all=self.all[:count])
 
     def with_spells(self, count: int) -> ParameterSet:
         """The set with one standard normal number a spell at its end, if there are none yet."""

@@ -20,6 +20,7 @@ from trackfit.inference.marginal import Approximation
 from trackfit.inference.observations import Sites
 
 DRAWS_AT_ONCE = 100
+LIFT = 1e-12
 
 
 def leave_one_out_replicates(
@@ -58,8 +59,27 @@ def _factors(found: Approximation) -> tuple[Cholesky, Cholesky]:
     try:
         return factor(point.band(found.problem, none)), found.mode.cholesky
     except NotPositiveDefinite:
-        process = factor(point.band(found.problem, none, exact=False))
+        process = _factor_lifted(point.band(found.problem, none, exact=False))
         return process, factor(point.band(found.problem, sites, exact=False))
+
+
+def _factor_lifted(band: Float[np.ndarray, "states dim 2*dim"]) -> Cholesky:
+    """Factor a process precision; beside an animal at rest the vague start is lost in rounding.
+
+    The diagonal is then lifted by what rounding leaves of it: the start becomes less vague, and
+    stays vague beside the errors of fixes.
+
+    Raises
+    ------
+    NotPositiveDefinite
+        The precision is not finite.
+    """
+    try:
+        return factor(band)
+    except NotPositiveDefinite:
+        lifted = band.copy()
+        lifted[:, :, 0] += LIFT * band[:, :, 0].max()
+        return factor(lifted)
 
 
 def _positive(matrix: Float[np.ndarray, "n 2 2"]) -> Float[np.ndarray, "n 2 2"]:

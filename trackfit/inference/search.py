@@ -69,6 +69,15 @@ class Search:
             self.latest = (key, found)
         return self.latest[1]
 
+    def with_spread(self, free: Float[np.ndarray, " free"]) -> Approximation:
+        """The approximation at some parameters, its `spread` computed: that, too, can fail."""
+        found = self.at(free)
+        try:
+            _ = found.spread
+        except ModeNotFound as fault:
+            raise Rejected from fault
+        return found
+
     def _anew(self, theta: Float[np.ndarray, " parameters"]) -> Approximation:
         try:
             return approximate(self.problem, theta, self.cold)
@@ -91,7 +100,7 @@ class Search:
         """Negative log posterior of the free parameters and its gradient."""
         self._refuse_wild(free)
         with np.errstate(all="ignore"):
-            found = self.at(free)
+            found = self.with_spread(free)
             gradient = found.gradient()[self.parameters.free_at]
         penalty, slope = self.parameters.penalty(free)
         return found.negative_log_marginal + penalty, gradient + slope
@@ -116,13 +125,22 @@ class Search:
         )
 
     def hessian(self, found: Minimum) -> Float[np.ndarray, "free free"]:
-        """Hessian of the negative log posterior at the minimum."""
+        """Hessian of the negative log posterior at the minimum.
+
+        Raises
+        ------
+        Rejected
+            A point beside the minimum has no value, or no finite gradient.
+        """
         reach = np.array([p.reach for p in self.parameters.free])
         metric = nearest_positive(found.metric, reach**-2.0)
         spread = np.sqrt(np.diag(np.linalg.inv(metric)))
         # a twentieth of a standard error: far above rounding, far below the scale of curvature
         steps = 0.05 * np.minimum(spread, reach)
-        return difference_hessian(lambda free: self(free)[1], found.at, steps)
+        hessian = difference_hessian(lambda free: self(free)[1], found.at, steps)
+        if not np.isfinite(hessian).all():
+            raise Rejected
+        return hessian
 
     def metric(self, found: Minimum) -> Float[np.ndarray, "free free"]:
         """A positive definite metric for a search that starts where this one ended."""

@@ -35,7 +35,7 @@ import numpy as np
 from jaxtyping import Float, Int
 
 from trackfit.inference.estimates import parameter_table
-from trackfit.inference.fit import LEAST_CURVATURE, Begin, Fit, FitStatus, fit_track
+from trackfit.inference.fit import LEAST_CURVATURE, Fit, FitStatus, Start, fit_track
 from trackfit.inference.optimise import Rejected, nearest_positive
 from trackfit.inference.parameters import JointNormal, ParameterSet
 from trackfit.inference.search import Search
@@ -174,10 +174,9 @@ class _Tag:
         self.site = None
         try:
             if self.found is None:
-                if self.attempts == MAX_ATTEMPTS:
-                    return
                 self.attempts += 1
-                self._fit_anew(cavity, lambda done, words: progress(name, 0.5 * done, words))
+                if self.attempts <= MAX_ATTEMPTS:
+                    self._fit_anew(cavity, lambda done, words: progress(name, 0.5 * done, words))
             else:
                 progress(name, 0.5 + 0.1 * number / MAX_SWEEPS, f"sweep {number + 1} over all tags")
                 self._fit_again(cavity)
@@ -192,6 +191,9 @@ class _Tag:
         fit = fit_track(data, self._with(cavity), plain, report_hours, progress)
         if fit.states is None or fit.status is FitStatus.NOT_CONVERGED:
             return
+        # smooth terms of the track's own have their spreads now
+        own = replace(fit.model.parameters, joint=None)
+        self.model = replace(self.model, parameters=own)
         search = Search(data, self.model, settings.step_hours, report_hours)
         search.warm = fit.states.approximation.warm
         self.search = search
@@ -312,7 +314,7 @@ class _Found:
         slope = slope - (cavity.precision @ at - cavity.shift)
         return _Site.of(0.5 * (curvature + curvature.T), slope, at, self.reach[shared])
 
-    def begin(self, cavity: JointNormal, mean: Vector) -> Begin:
+    def begin(self, cavity: JointNormal, mean: Vector) -> Start:
         """The shared parameters at their mean, the own ones where that puts them."""
         own, shared = self.own, self.shared
         theta = self.theta.copy()

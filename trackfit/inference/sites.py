@@ -16,7 +16,7 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 import numpy as np
-from jaxtyping import Float
+from jaxtyping import Bool, Float
 
 from trackfit.inference.observations import Observations, Sites
 from trackfit.inference.tails import Tilted, tilted_moments
@@ -39,7 +39,7 @@ class Cavity:
 
     mean_km: Float[np.ndarray, "fixes 2"]
     covariance_km2: Float[np.ndarray, "fixes 2 2"]
-    sound: Float[np.ndarray, " fixes"]
+    sound: Bool[np.ndarray, " fixes"]
 
 
 def cavities(

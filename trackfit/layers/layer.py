@@ -136,6 +136,8 @@ class Layer:
         Node's nearest source cell was missing at one of the times at least.
     share_filled
         Share of the source's cells in the box (over all times) that were missing.
+    source_hours
+        First and last time that the source has, read or not.
     """
 
     name: str
@@ -149,6 +151,12 @@ class Layer:
     filled: Bool[np.ndarray, "ny nx"]
     share_filled: float
     source: str
+    source_hours: tuple[float, float] | None = None
+
+    @property
+    def own_span_hours(self) -> tuple[float, float]:
+        """First and last time of the source, of which `hours` may be a part."""
+        return self.source_hours or (float(self.hours[0]), float(self.hours[-1]))
 
     @property
     def fixed(self) -> bool:

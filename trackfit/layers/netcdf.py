@@ -70,7 +70,7 @@ def _read(
     _check_directions(parts, places[0].grid, request)
     for part, place in zip(parts, places, strict=True):
         _check_dimensions(part, {time, place.rows, place.cols}, request)
-    hours, slices = _hours(parts[0], time, hours_span, request)
+    hours, slices, own_span = _hours(parts[0], time, hours_span, request)
     window = places[0].grid.window(view, request)
     check_size(hours.size * len(parts), window.rows.size, window.cols.size, request)
     with foreign(request.place, "read its values"):
@@ -81,7 +81,7 @@ def _read(
     values = np.stack([_in_first_unit(part, parts, cells, request)
                        for part, cells in zip(parts, loaded, strict=True)])  # fmt: skip
     values[..., window.absent] = np.nan
-    return Source(window, values, hours, _unit(parts[0]))
+    return Source(window, values, hours, _unit(parts[0]), own_span)
 
 
 # --- variables ---
@@ -318,14 +318,15 @@ def _time_coordinate(part: xr.DataArray, time: str, request: LayerRequest) -> xr
 
 def _hours(
     part: xr.DataArray, time: str | None, span: tuple[float, float], request: LayerRequest
-) -> tuple[np.ndarray, slice]:
+) -> tuple[np.ndarray, slice, tuple[float, float] | None]:
+    """Times of the slices to read, the slices, and the first and last time of the file."""
     if time is None:
-        return np.zeros(1), slice(None)
+        return np.zeros(1), slice(None), None
     values = _time_coordinate(part, time, request)
     calendar = str(values.attrs.get("calendar", "standard"))
     hours = hours_since_1970(values.values, str(values.attrs["units"]), calendar, request)
     slices = bracket(hours, span, request)
-    return hours[slices], slices
+    return hours[slices], slices, (float(hours[0]), float(hours[-1]))
 
 
 def _loaded(

@@ -56,6 +56,7 @@ def read_layer(
         filled=nearest(missing.any(axis=0), nodes),
         share_filled=_share(missing, source.window, box_km),
         source=str(request.file),
+        source_hours=source.span_hours,
     )
 
 

@@ -133,7 +133,7 @@ class Shore:
         lower = np.floor(level).astype(int)
         for k in np.unique(lower[lower >= 0]):
             at = np.flatnonzero(lower == k)
-            low, high = (self._between_cells(self._share(k + j), xy_km[at]) for j in (0, 1))
+            low, high = (self._between_cells(self._share(int(k) + j), xy_km[at]) for j in (0, 1))
             found = low + (level[at] - k) * (high - low)
             share[at] = np.where(found > 0.01, found, np.minimum(share[at], 0.01))
         return share

@@ -23,6 +23,8 @@ class Source:
         (components, times, rows, cols) in the file's unit, NaN where missing.
     hours
         Hours since 1970 of the slices; one entry for a fixed layer.
+    span_hours
+        First and last time in the file, whether read or not; None for a fixed layer.
     unit
         The file's unit, None if it says none.
     """
@@ -31,6 +33,7 @@ class Source:
     values: Float[np.ndarray, "components times rows cols"]
     hours: Float[np.ndarray, " times"]
     unit: str | None
+    span_hours: tuple[float, float] | None = None
 
 
 def check_size(times: int, rows: int, cols: int, request: LayerRequest) -> None:

@@ -3,6 +3,7 @@
 from trackfit.motion.diffusive import Diffusive
 from trackfit.motion.motion import Motion, MotionParameter, Transition
 from trackfit.motion.persistent import Persistent
+from trackfit.motion.smooth import SmoothTerm, fit_curve
 from trackfit.motion.velocity import DistanceTerm, FieldTimes, LayerTerm, VelocityField
 
 __all__ = [
@@ -13,6 +14,8 @@ __all__ = [
     "Motion",
     "MotionParameter",
     "Persistent",
+    "SmoothTerm",
     "Transition",
     "VelocityField",
+    "fit_curve",
 ]

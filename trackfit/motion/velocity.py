@@ -19,6 +19,7 @@ import jax.numpy as jnp
 from jaxtyping import Array, Float
 
 from trackfit.layers.splines import JET_ORDERS, JET_ROW, Spline, TimeBracket, jet_rows, spline_jet
+from trackfit.motion.smooth import SmoothTerm
 
 SOFTENING_KM = 1.0
 """A distance to a point is sqrt(r^2 + SOFTENING_KM^2): its gradient is smooth at the point."""
@@ -85,7 +86,7 @@ class DistanceTerm:
         return square_root_jet(jnp.stack(rows[: jet_rows(order)]))[None]
 
 
-Term = LayerTerm | DistanceTerm
+Term = LayerTerm | SmoothTerm | DistanceTerm
 
 
 @partial(jax.tree_util.register_dataclass, data_fields=["terms", "current"], meta_fields=[])

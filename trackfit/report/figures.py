@@ -2,7 +2,8 @@
 
 import hashlib
 import re
-from collections.abc import Sequence
+from collections import Counter
+from collections.abc import Iterable, Mapping, Sequence
 from functools import partial
 from pathlib import Path
 
@@ -42,19 +43,22 @@ def figure_writers(
         choices = ", ".join(FIGURE_FORMATS)
         raise ResultsError(f"figure_format {figure_format!r} is not known: choose from {choices}")
     writers: dict[str, FileWriter] = {}
+    stems = file_stems([*fixes.table["tag"].unique(), *(track.tag for track in tracks)])
     for track in tracks:
         if len(track.table):
-            name = f"figures/track_{file_stem(track.tag)}.{figure_format}"
+            name = f"figures/track_{stems[track.tag]}.{figure_format}"
             writers[name] = partial(_write_track, track, fixes, scene)
     track_of = {track.tag: track for track in tracks if len(track.table)}
     for judgement in judgements:
         if judgement.tag in track_of and len(judgement.table):
             draw = partial(judgement_figure, judgement, track_of[judgement.tag], scene)
-            name = f"figures/fixes_{file_stem(judgement.tag)}.{figure_format}"
+            name = f"figures/fixes_{stems[judgement.tag]}.{figure_format}"
             writers[name] = partial(save_figure, draw)
-    for page, panels in response_pages(responses).items():
-        draw = partial(response_figure, panels, on_path)
-        writers[f"figures/{page}.{figure_format}"] = partial(save_figure, draw)
+    terms = file_stems([response.term for response in responses])
+    for page in response_pages(responses):
+        draw = partial(response_figure, page.panels, on_path, alike=page.alike)
+        name = "_".join(["responses", *([terms[page.term]] if page.term else []), *page.part])
+        writers[f"figures/{name}.{figure_format}"] = partial(save_figure, draw)
     return writers
 
 
@@ -64,19 +68,30 @@ def _write_track(track: TrackLike, fixes: FixesLike, scene: Scene, path: Path) -
     save_figure(partial(track_figure, track, used, aside, scene), path)
 
 
-def file_stem(tag: str) -> str:
-    """Return a file name for a tag: small letters, digits, - and _.
+def file_stems(names: Iterable[str]) -> Mapping[str, str]:
+    """Return a part of a file name for each tag or term: small letters, digits, - and _.
 
-    A tag that needs changing gets a few digits of its sha256, so that no two tags share a file,
-    not even where capitals do not count.
+    Names that would share a file, be it only where capitals do not count, get a few digits of
+    their sha256.
 
     Examples
     --------
-    >>> file_stem("seal-7"), file_stem("Seal 7/b")
-    ('seal-7', 'seal_7_b-aea85b')
+    >>> dict(file_stems(["Seal 7/b", "p1", "P1"]))
+    {'Seal 7/b': 'seal_7_b', 'p1': 'p1-f64551', 'P1': 'p1-fbeae7'}
     """
-    plain = _UNSAFE.sub("_", tag.lower()).strip("_")[:_LONGEST]
-    if plain and plain == tag:
-        return tag
-    digest = hashlib.sha256(tag.encode()).hexdigest()[:6]
-    return f"{plain}-{digest}" if plain else digest
+    stems = {name: _cleaned(name) for name in names}
+    digits = 0
+    while shared := {stem for stem, count in Counter(stems.values()).items() if count > 1}:
+        digits += 6
+        for name in [name for name, stem in stems.items() if stem in shared]:
+            stems[name] = f"{_cleaned(name)}-{_digest(name)[:digits]}"
+    return stems
+
+
+def _cleaned(name: str) -> str:
+    """Small letters, digits, - and _; of a name with none of them, digits of its sha256."""
+    return _UNSAFE.sub("_", name.lower()).strip("_")[:_LONGEST] or _digest(name)[:6]
+
+
+def _digest(name: str) -> str:
+    return hashlib.sha256(name.encode()).hexdigest()

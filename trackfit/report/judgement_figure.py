@@ -7,7 +7,9 @@ import pandas as pd
 from jaxtyping import Float
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.ticker import FuncFormatter
 
+from trackfit.counted import counted
 from trackfit.report import style
 from trackfit.report.map_panel import (
     HALO,
@@ -60,7 +62,8 @@ def judgement_figure(judgement: JudgementLike, track: TrackLike, scene: Scene) -
     lonlat = table[["lon", "lat"]].to_numpy(float)
     frame = frame_of(track, lonlat[~flagged], scene.plane, None)
     size = frame.width / frame.height * _MAP_HEIGHT_IN + _PANEL_WIDTH_IN + _MARGINS_IN[0]
-    figure = style.new_figure(size, _MAP_HEIGHT_IN + _MARGINS_IN[1], _title(judgement))
+    height = _MAP_HEIGHT_IN + _MARGINS_IN[1]
+    figure = style.new_figure(size, height, _title(judgement), track.fit_status)
     grid = figure.add_gridspec(2, 2, width_ratios=[size - _PANEL_WIDTH_IN, _PANEL_WIDTH_IN])
     map_axes = figure.add_subplot(grid[:, 0])
     p_axes = figure.add_subplot(grid[0, 1])
@@ -94,7 +97,7 @@ def _draw_map(axes: Axes, frame: Frame, table: pd.DataFrame, track: TrackLike, s
         )
     )
     flagged = table["flagged"].to_numpy(bool)
-    draw_ground(axes, frame, scene)
+    draw_ground(axes, frame, scene, path)
     draw_path(axes, path, track.table["in_gap"].to_numpy(bool))
     if not flagged.all():
         marks = fix_marks(int((~flagged).sum()))
@@ -154,6 +157,7 @@ def _draw_against_time(
         label="95 % below if errors are normal",
     )
     offset_axes.set(title="Distance from where the others place it", ylabel="distance (km)")
+    offset_axes.yaxis.set_major_formatter(FuncFormatter(lambda km, _: f"{km:g}"))
     share_time_axis(p_axes, offset_axes)
     margin = max(0.02 * (time[-1] - time[0]), 1 / 48)
     p_axes.set_xlim(time[0] - margin, time[-1] + margin)
@@ -169,6 +173,6 @@ def _dress_p_values(axes: Axes, p_value: Float[np.ndarray, " n"], limit: float) 
 
 def _note_hidden(figure: Figure, count: int) -> None:
     if count:
-        text = f"{count} flagged fix{'es' * (count != 1)} beyond the map"
+        text = f"{counted(count, 'flagged fix', 'flagged fixes')} beyond the map"
         height = style.FOOTER_IN / figure.get_figheight() / 2
         figure.text(0.988, height, text, ha="right", va="center", color=style.GREY, fontsize=7.5)

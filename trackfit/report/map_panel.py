@@ -8,10 +8,13 @@ import numpy as np
 from jaxtyping import Bool, Float
 from matplotlib.axes import Axes
 from matplotlib.collections import PolyCollection
+from matplotlib.contour import ContourSet
 from matplotlib.lines import Line2D
 from matplotlib.patches import PathPatch
 from matplotlib.path import Path as Outline
+from matplotlib.text import Text
 from matplotlib.ticker import MaxNLocator
+from scipy.spatial import cKDTree
 from shapely import Polygon, box, get_parts, intersection
 from shapely.geometry.base import BaseGeometry
 
@@ -28,6 +31,8 @@ _DRAWS_SHOWN = 20
 _EDGED_FIXES = 400
 _MARGIN = 0.07
 _LEAST_SIDE_KM = 0.5
+_LABELLED_SHARE = 0.12  # contours shorter than this share of the map get no label
+_LABEL_ROOM = 0.035
 _SHAPES = (0.7, 1.5)  # narrowest and widest map, width over height
 HALO: list[Any] = [effects.withStroke(linewidth=2.2, foreground="white")]
 """A white rim that keeps small texts readable over anything."""
@@ -91,7 +96,7 @@ def draw_map(
     plane = scene.plane
     path = plane.to_plane(track.table["lon"].to_numpy(float), track.table["lat"].to_numpy(float))
     used = plane.to_plane(used_lonlat[:, 0], used_lonlat[:, 1])
-    draw_ground(axes, frame, scene)
+    draw_ground(axes, frame, scene, path)
     _draw_drawn_paths(axes, track, plane)
     _draw_ellipses(axes, track, plane)
     draw_path(axes, path, track.table["in_gap"].to_numpy(bool))
@@ -102,8 +107,8 @@ def draw_map(
     return len(aside_lonlat) - shown
 
 
-def draw_ground(axes: Axes, frame: Frame, scene: Scene) -> None:
-    """Set up an empty map: its edges and axes, contours and land."""
+def draw_ground(axes: Axes, frame: Frame, scene: Scene, busy_km: Float[np.ndarray, "n 2"]) -> None:
+    """Set up an empty map: its edges and axes, contours and land; labels keep off busy places."""
     axes.set(xlim=(frame.x_min, frame.x_max), ylim=(frame.y_min, frame.y_max))
     axes.set_aspect("equal", adjustable="box")
     axes.set(title="Map in the local plane (north is up at its centre)")
@@ -111,7 +116,7 @@ def draw_ground(axes: Axes, frame: Frame, scene: Scene) -> None:
     axes.xaxis.set_major_locator(MaxNLocator(6))
     axes.yaxis.set_major_locator(MaxNLocator(7))
     if scene.depth is not None:
-        _draw_contours(axes, frame, scene.depth)
+        _draw_contours(axes, frame, scene.depth, busy_km)
     if scene.coast is not None:
         _draw_land(axes, frame, scene.coast.land)
 
@@ -123,7 +128,9 @@ def _rings_km(track: TrackLike, rows: np.ndarray, plane: Plane) -> Float[np.ndar
     return flat.reshape(rings.shape)
 
 
-def _draw_contours(axes: Axes, frame: Frame, layer: Layer) -> None:
+def _draw_contours(
+    axes: Axes, frame: Frame, layer: Layer, busy_km: Float[np.ndarray, "n 2"]
+) -> None:
     """Draw labelled contours of the part of a layer that lies on the map and has data."""
     _, rows, columns, _ = layer.values.shape
     x = layer.x0_km + layer.spacing_km * np.arange(columns)
@@ -145,16 +152,34 @@ def _draw_contours(axes: Axes, frame: Frame, layer: Layer) -> None:
         linestyles="solid", zorder=1,
     )  # fmt: skip
     labels = axes.clabel(
-        lines, fontsize=7, fmt="%g", colors="#4F6B7A", inline_spacing=3, zorder=1.5
-    )
+        lines, fontsize=7, fmt="%g", colors="#4F6B7A", inline_spacing=3, zorder=5.5,
+        manual=_quiet_places(lines, frame, busy_km),
+    )  # fmt: skip
     for label in labels:
-        at = (np.array(label.get_position()) - [frame.x_min, frame.y_min]) / [
-            frame.width,
-            frame.height,
-        ]
-        label.set_visible(bool(((at > 0.04) & (at < 0.96)).all()))
-    text = style.as_plain_text(f"{layer.name} ({layer.unit})")
+        label.set_path_effects(HALO)
+    text = style.with_unit(layer.name, layer.unit)
     axes.add_line(Line2D([], [], color=style.CONTOUR, linewidth=0.9, label=text))
+
+
+def _quiet_places(
+    lines: ContourSet, frame: Frame, busy_km: Float[np.ndarray, "n 2"]
+) -> list[tuple[float, float]]:
+    """A place for a label on each long contour, furthest from what is busy and from the others."""
+    low, size = np.array([frame.x_min, frame.y_min]), np.array([frame.width, frame.height])
+    taken = cKDTree(busy_km)
+    places: list[np.ndarray] = []
+    for contour in (line for level in lines.allsegs for line in level):
+        at = (contour - low) / size
+        inside = contour[((at > 0.05) & (at < 0.95)).all(axis=1)]
+        if len(inside) < 2 or np.ptp(inside, axis=0).max() < _LABELLED_SHARE * frame.width:
+            continue
+        room = taken.query(inside)[0]
+        if places:
+            room = np.minimum(room, cKDTree(np.array(places)).query(inside)[0])
+        best = int(np.argmax(room))
+        if room[best] > _LABEL_ROOM * frame.width:
+            places.append(inside[best])
+    return [(float(x), float(y)) for x, y in places]
 
 
 def _draw_land(axes: Axes, frame: Frame, land: BaseGeometry) -> None:
@@ -260,13 +285,16 @@ def _draw_ends(axes: Axes, path: Float[np.ndarray, "n 2"], scene: Scene) -> None
     if scene.colony_lonlat is not None:
         lon, lat = (np.array([value]) for value in scene.colony_lonlat)
         x, y = scene.plane.to_plane(lon, lat)[0]
-        axes.scatter(x, y, marker="^", s=64, color=style.ORANGE, label="colony", **edge)
+        label = style.as_plain_text(scene.colony_name)
+        axes.scatter(x, y, marker="^", s=64, color=style.ORANGE, label=label, **edge)
 
 
 def draw_scale_bar(axes: Axes, frame: Frame, busy: Float[np.ndarray, "n 2"]) -> None:
     """Draw a bar of a round length in the emptiest corner."""
     length = round_length_km(frame.width * 0.24)
     share = length / frame.width
+    labels = [text.get_position() for text in axes.texts if type(text) is Text]
+    busy = np.vstack([busy, np.reshape(np.array(labels), (-1, 2))])
     at = (busy - [frame.x_min, frame.y_min]) / [frame.width, frame.height]
     corners = [(0.04, 0.04), (0.96 - share, 0.04), (0.04, 0.93), (0.96 - share, 0.93)]
     x, y = min(corners, key=lambda corner: _crowd(at, corner, share))

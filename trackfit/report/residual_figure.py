@@ -8,8 +8,10 @@ from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.ticker import MaxNLocator
 
+from trackfit.counted import counted
 from trackfit.criticism.residuals import Autocorrelation, Quantiles
 from trackfit.report import style
+from trackfit.results.inputs import StatusLike
 
 SHOWN = 5.0
 """Residuals beyond this are drawn at the edge of the panel, as arrows."""
@@ -25,6 +27,7 @@ def residual_figure(
     quantiles: Quantiles,
     of_ahead: Autocorrelation,
     of_left_out: Autocorrelation,
+    status: StatusLike | None = None,
 ) -> Figure:
     """Draw the residuals of one tag.
 
@@ -38,9 +41,11 @@ def residual_figure(
         Of these.
     of_ahead, of_left_out
         Autocorrelation of one-step-ahead and of leave-one-out residuals.
+    status
+        How the fit ended; one that failed is told below the title.
     """
-    words = f"Tag {tag}: residuals of {len(hours)} fixes"
-    figure = style.new_figure(*_SIZE_IN, words)
+    words = f"Tag {tag}: residuals of {counted(len(hours), 'fix', 'fixes')}"
+    figure = style.new_figure(*_SIZE_IN, words, status)
     grid = figure.subplots(2, 2, width_ratios=(1.0, 1.35))
     _draw_quantiles(grid[0, 0], quantiles)
     _draw_in_time(grid[0, 1], hours, left_out)

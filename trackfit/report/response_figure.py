@@ -1,6 +1,7 @@
 """What the tags prefer: h against each layer, with its 95 % band."""
 
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 from jaxtyping import Float
@@ -23,33 +24,63 @@ PathValues = Mapping[tuple[str, str], Float[np.ndarray, " n"]]
 """Values of a layer along a path, by (tag, term)."""
 
 
-def response_pages(responses: Sequence[ResponseLike]) -> dict[str, list[list[ResponseLike]]]:
-    """Share responses out to pages: by page name, the panels, each with its responses.
+@dataclass(frozen=True)
+class ResponsePage:
+    """One page of responses.
+
+    Attributes
+    ----------
+    panels
+        The panels, each with its responses.
+    term
+        The term that all panels share; empty where each has its own.
+    part
+        Which part of the pages alike: ("page2",), or () for the only one.
+    alike
+        All responses that share the axis of the preference, be they on other pages.
+    """
+
+    panels: Sequence[Sequence[ResponseLike]]
+    term: str = ""
+    part: tuple[str, ...] = ()
+    alike: Sequence[ResponseLike] = ()
+
+
+def response_pages(responses: Sequence[ResponseLike]) -> list[ResponsePage]:
+    """Share responses out to pages.
 
     Few tags: one page, one panel a term, all tags in it. Many tags: pages of one term each, one
-    panel a tag, at most `PANELS_A_PAGE`.
+    panel a tag, at most `PANELS_A_PAGE`, all with the same axis of the preference.
     """
     terms = list(dict.fromkeys(r.term for r in responses))
     by_term = {term: [r for r in responses if r.term == term] for term in terms}
     if not terms:
-        return {}
+        return []
     if max(len(group) for group in by_term.values()) <= TAGS_IN_ONE_PANEL:
-        panels = list(by_term.values())
-        return _paged("responses", panels)
-    pages: dict[str, list[list[ResponseLike]]] = {}
-    for number, group in enumerate(by_term.values(), 1):
-        pages |= _paged(f"responses_{number}", [[r] for r in group])
-    return pages
+        return _paged(list(by_term.values()))
+    return [
+        page
+        for term, group in by_term.items()
+        for page in _paged([[r] for r in group], term, group)
+    ]
 
 
-def _paged(name: str, panels: list[list[ResponseLike]]) -> dict[str, list[list[ResponseLike]]]:
+def _paged(
+    panels: list[list[ResponseLike]], term: str = "", alike: Sequence[ResponseLike] = ()
+) -> list[ResponsePage]:
     starts = range(0, len(panels), PANELS_A_PAGE)
-    names = [name] if len(starts) == 1 else [f"{name}_page{k}" for k in range(1, len(starts) + 1)]
-    return {n: panels[s : s + PANELS_A_PAGE] for n, s in zip(names, starts, strict=True)}
+    parts = [()] if len(starts) == 1 else [(f"page{k}",) for k in range(1, len(starts) + 1)]
+    return [
+        ResponsePage(panels[start : start + PANELS_A_PAGE], term, part, alike)
+        for start, part in zip(starts, parts, strict=True)
+    ]
 
 
 def response_figure(
-    panels: Sequence[Sequence[ResponseLike]], on_path: PathValues | None = None
+    panels: Sequence[Sequence[ResponseLike]],
+    on_path: PathValues | None = None,
+    *,
+    alike: Sequence[ResponseLike] = (),
 ) -> Figure:
     """Draw one page of responses.
 
@@ -59,9 +90,12 @@ def response_figure(
         One or more panels; the responses of a panel share term, layer and unit.
     on_path
         Layer values along the paths: a rug at the foot of the panel shows where data were.
+    alike
+        Responses that set the axis of the preference for all panels; each sets its own if none.
+        Fits that failed do not count where others converged.
     """
-    columns = min(len(panels), _COLUMNS)
-    rows = -(-len(panels) // columns)
+    rows = -(-len(panels) // _COLUMNS)
+    columns = -(-len(panels) // rows)
     alone = len({r.term for panel in panels for r in panel}) == 1 and len(panels) > 1
     tags = {r.tag for panel in panels for r in panel} - {ALL_TAGS}
     whose = f" of tag {next(iter(tags))}" if len(tags) == 1 else ""
@@ -70,30 +104,43 @@ def response_figure(
     figure = style.new_figure(width, rows * _PANEL_IN[1] + 0.95, title)
     cells = figure.subplots(rows, columns, squeeze=False).ravel()
     for axes, panel in zip(cells, panels, strict=False):
-        _draw_panel(axes, panel, on_path or {})
-        axes.set_title(style.as_plain_text(f"tag {panel[0].tag}" if alone else panel[0].term))
+        _draw_panel(axes, panel, on_path or {}, _reach(alike or panel))
+        axes.set_title(style.as_plain_text(_whose(panel[0]) if alone else panel[0].term))
     for axes in cells[len(panels) :]:
         axes.remove()
     _legend(figure, list(cells[: len(panels)]))
     return figure
 
 
-def _draw_panel(axes: Axes, panel: Sequence[ResponseLike], on_path: PathValues) -> None:
-    low = min(float(np.min(r.lower95)) for r in panel)
-    high = max(float(np.max(r.upper95)) for r in panel)
+def _whose(response: ResponseLike) -> str:
+    """The tag, and how its fit ended where it failed."""
+    failed = "" if response.fit_status.ok else f" ({response.fit_status.name})"
+    return f"tag {response.tag}{failed}"
+
+
+def _reach(responses: Sequence[ResponseLike]) -> tuple[float, float]:
+    """Lowest and highest edge of the bands."""
+    trusted = [r for r in responses if r.fit_status.ok] or responses
+    low = min(float(np.min(r.lower95)) for r in trusted)
+    return low, max(float(np.max(r.upper95)) for r in trusted)
+
+
+def _draw_panel(
+    axes: Axes, panel: Sequence[ResponseLike], on_path: PathValues, reach: tuple[float, float]
+) -> None:
+    low, high = reach
     room = 0.06 * (high - low or 1.0)
     foot = low - (2 + len(panel)) * room
     axes.set_ylim(foot, high + room)
     axes.axhline(0, color=style.GREY, linewidth=0.6, zorder=1)
     for number, response in enumerate(panel):
         colour, line = style.CYCLE[number % len(style.CYCLE)]
-        tag = style.as_plain_text(response.tag)
+        tag = style.as_plain_text(_whose(response).removeprefix("tag "))
         band = axes.fill_between(response.at, response.lower95, response.upper95, color=colour)
         band.set(alpha=0.18, linewidth=0, zorder=2)
         axes.plot(response.at, response.h, color=colour, linestyle=line, label=tag, zorder=3)
         _rug(axes, on_path.get((response.tag, response.term)), foot + (number + 1) * room, colour)
-    unit = panel[0].unit
-    axes.set_xlabel(style.as_plain_text(f"{panel[0].layer} ({unit})" if unit else panel[0].layer))
+    axes.set_xlabel(style.with_unit(panel[0].layer, panel[0].unit))
     axes.set_ylabel("preference h (km\N{SUPERSCRIPT TWO}/h)")
     axes.xaxis.set_major_locator(MaxNLocator(5))
     axes.yaxis.set_major_locator(MaxNLocator(6))

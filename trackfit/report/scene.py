@@ -23,13 +23,14 @@ class Scene:
     depth
         A layer to draw as labelled contours; its first hour if it changes in time.
     colony_lonlat
-        A point to mark, in degrees.
+        A point to mark, in degrees, and in `colony_name` what it is.
     """
 
     plane: Plane
     coast: Coast | None = None
     depth: Layer | None = None
     colony_lonlat: tuple[float, float] | None = None
+    colony_name: str = "colony"
 
 
 @dataclass(frozen=True)

@@ -17,6 +17,8 @@ from matplotlib.collections import PathCollection
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 
+from trackfit.results.inputs import StatusLike
+
 BLUE = "#0072B2"
 ORANGE = "#E69F00"
 VERMILION = "#D55E00"
@@ -76,13 +78,22 @@ def house_style() -> Iterator[None]:
         yield
 
 
-def new_figure(width_in: float, height_in: float, title: str) -> Figure:
-    """Return an empty figure with its title and its footer; call inside `house_style`."""
+def new_figure(
+    width_in: float, height_in: float, title: str, status: StatusLike | None = None
+) -> Figure:
+    """Return an empty figure with its title and its footer; call inside `house_style`.
+
+    A fit that failed is told below the title.
+    """
+    failed = status is not None and not status.ok
+    if status is not None and failed:
+        title += f"\nFit status {status.name}: not to be relied on"
     share = FOOTER_IN / height_in
     figure = Figure(figsize=(width_in, height_in), facecolor="white")
     FigureCanvasAgg(figure)
     figure.set_layout_engine("constrained", rect=(0.005, share, 0.99, 1 - share - 0.005))
-    figure.suptitle(as_plain_text(title), x=0.012, ha="left")
+    colour = VERMILION if failed else BLACK
+    figure.suptitle(as_plain_text(title), x=0.012, ha="left", color=colour)
     figure.text(0.012, share / 2, CAUTION, ha="left", va="center", color=GREY, fontsize=7.5)
     return figure
 
@@ -126,6 +137,29 @@ def _keep_clear_below(figure: Figure, artist: Artist) -> None:
     top = artist.get_window_extent(FigureCanvasAgg(figure).get_renderer()).y1
     share = top / figure.bbox.height + 0.05 / figure.get_figheight()
     figure.set_layout_engine("constrained", rect=(0.005, share, 0.99, 1 - share - 0.005))
+
+
+def with_unit(name: str, unit: str) -> str:
+    """Return a label as people write units: degC as °C, m^2 as m².
+
+    Examples
+    --------
+    >>> with_unit("temperature", "degC"), with_unit("slope", "1"), with_unit("area", "km^2")
+    ('temperature (°C)', 'slope', 'area (km²)')
+    """
+    if unit in ("", "1", "none"):
+        return as_plain_text(name)
+    for written, shown in _UNITS:
+        unit = unit.replace(written, shown)
+    return as_plain_text(f"{name} ({unit})")
+
+
+_UNITS = (
+    ("degC", "°C"),
+    ("degree_Celsius", "°C"),
+    ("^2", "²"),
+    ("^3", "³"),
+)
 
 
 def as_plain_text(text: str) -> str:

@@ -96,10 +96,15 @@ def _draw_bands(
     if len(time) == 1:  # a band needs two times: one position is widened by half an hour
         time = time[0] + np.array([-0.5, 0.5]) * _HOUR
         mean, sd = np.repeat(mean, 2), np.repeat(sd, 2)
+    seen = 0.0
     for probability, alpha in _BANDS:
         half = ndtri((1 + probability) / 2) * sd
         band = axes.fill_between(time, mean - half, mean + half, color=style.BLUE, alpha=alpha)
-        band.set(linewidth=0, zorder=2, label=f"{100 * probability:.0f} % band")
+        label = f"{100 * probability:.0f} % band"
+        band.set(linewidth=0, zorder=2, label="_" + label)
+        # bands lie over each other: the legend shows the colours that are seen
+        seen = 1 - (1 - seen) * (1 - alpha)
+        axes.fill_between([], [], color=style.BLUE, alpha=seen, linewidth=0, label=label)
     axes.plot(time, mean, color=style.BLUE, linewidth=1.1, zorder=3)
     low, high = float((mean - 2.2 * sd).min()), float((mean + 2.2 * sd).max())
     axes.set_ylim(low - 0.04 * (high - low), high + 0.04 * (high - low))

@@ -3,6 +3,7 @@
 import pandas as pd
 from matplotlib.figure import Figure
 
+from trackfit.counted import counted
 from trackfit.report import style
 from trackfit.report.map_panel import draw_map, frame_of
 from trackfit.report.scene import FixPoints, Scene
@@ -37,7 +38,8 @@ def track_figure(
     used, aside = FixPoints.used(fixes), FixPoints.set_aside(set_aside)
     frame = frame_of(track, used.lonlat, scene.plane, scene.colony_lonlat)
     size = frame.width / frame.height * _MAP_HEIGHT_IN + _PANEL_WIDTH_IN + _MARGINS_IN[0]
-    figure = style.new_figure(size, _MAP_HEIGHT_IN + _MARGINS_IN[1], _title(track, used))
+    height = _MAP_HEIGHT_IN + _MARGINS_IN[1]
+    figure = style.new_figure(size, height, _title(track, used), track.fit_status)
     grid = figure.add_gridspec(2, 2, width_ratios=[size - _PANEL_WIDTH_IN, _PANEL_WIDTH_IN])
     map_axes = figure.add_subplot(grid[:, 0])
     lon_axes = figure.add_subplot(grid[0, 1])
@@ -51,12 +53,12 @@ def track_figure(
 
 def _title(track: TrackLike, used: FixPoints) -> str:
     first, last = (track.table["time"].iloc[i].strftime("%Y-%m-%d %H:%M") for i in (0, -1))
-    fixes = f"{len(used.time)} fix{'es' * (len(used.time) != 1)}"
+    fixes = counted(len(used.time), "fix", "fixes")
     return f"Tag {track.tag}: {first} to {last} UTC, {fixes} in use"
 
 
 def _note_hidden(figure: Figure, count: int) -> None:
     if count:
-        text = f"{count} fix{'es' * (count != 1)} set aside not shown on the map"
+        text = f"{counted(count, 'fix', 'fixes')} set aside not shown on the map"
         height = style.FOOTER_IN / figure.get_figheight() / 2
         figure.text(0.988, height, text, ha="right", va="center", color=style.GREY, fontsize=7.5)

@@ -8,13 +8,13 @@ import shapely
 
 from trackfit.results.geometry import cut_line, ellipse_polygons
 from trackfit.results.inputs import TrackLike
-from trackfit.results.tables import positions_table
+from trackfit.results.tables import OF_THE_TAG, positions_table
 
 WGS84_CRS = "EPSG:4326"
 
 
 def to_pandas(tracks: Sequence[TrackLike]) -> pd.DataFrame:
-    """Return the positions of all tracks in one table: tag, then a filled track's columns."""
+    """Return the positions of all tracks in one table: tag, fit_status, a track's columns."""
     return positions_table(tracks)
 
 
@@ -32,9 +32,9 @@ def as_points(table: pd.DataFrame) -> gpd.GeoDataFrame:
 def track_lines(tracks: Sequence[TrackLike]) -> gpd.GeoDataFrame:
     """Return one line a tag, cut at the antimeridian; a tag with one position has no line."""
     rows = [_line_row(t) for t in tracks if len(t.table) > 1]
-    columns = ["tag", "start", "end", "positions", "geometry"]
+    columns = ["tag", "fit_status", "start", "end", "positions", "geometry"]
     lines = gpd.GeoDataFrame(rows, columns=columns, geometry="geometry", crs=WGS84_CRS)
-    return lines if rows else lines.astype({"tag": str, "positions": int})
+    return lines if rows else lines.astype({"tag": str, "fit_status": str, "positions": int})
 
 
 def _line_row(track: TrackLike) -> Mapping[str, object]:
@@ -42,6 +42,7 @@ def _line_row(track: TrackLike) -> Mapping[str, object]:
     time = table["time"]
     return {
         "tag": track.tag,
+        "fit_status": track.fit_status.name,
         "start": time.iloc[0],
         "end": time.iloc[-1],
         "positions": len(table),
@@ -55,5 +56,5 @@ def ellipses(tracks: Sequence[TrackLike], percent: int) -> gpd.GeoDataFrame:
     major, minor = f"ellipse{percent}_major_m", f"ellipse{percent}_minor_m"
     names = ["lon", "lat", major, minor, "ellipse_bearing_deg"]
     shapes = ellipse_polygons(*(table[name].to_numpy(float) for name in names))
-    kept = table[["tag", "time", major, minor, "ellipse_bearing_deg", "in_gap"]]
+    kept = table[[*OF_THE_TAG, "time", major, minor, "ellipse_bearing_deg", "in_gap"]]
     return gpd.GeoDataFrame(kept, geometry=shapes, crs=WGS84_CRS)

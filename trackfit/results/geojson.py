@@ -14,7 +14,8 @@ from trackfit.results import convert
 from trackfit.results.inputs import TrackLike
 from trackfit.results.tables import iso_times
 
-_DECIMALS = 7  # one centimetre on the ground
+_DECIMALS = 6
+"""Eleven centimetres on the ground, as RFC 7946 (section 11.2) advises: more is only longer."""
 
 
 def write_geojson(path: Path, tracks: Sequence[TrackLike]) -> None:
@@ -27,7 +28,8 @@ def write_geojson(path: Path, tracks: Sequence[TrackLike]) -> None:
         out.write('{"type": "FeatureCollection", "features": [')
         for number, feature in enumerate(_features(tracks)):
             out.write(",\n" if number else "\n")
-            out.write(json.dumps(feature, ensure_ascii=False, allow_nan=False))
+            text = json.dumps(feature, ensure_ascii=False, allow_nan=False, separators=(",", ":"))
+            out.write(text)
         out.write("\n]}\n")
 
 

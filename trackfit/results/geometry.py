@@ -12,7 +12,9 @@ from pyproj import Geod
 
 WGS84 = Geod(ellps="WGS84")
 VERTICES = 72
-"""Vertices of an ellipse; the polygon then holds 0.9987 of the ellipse's area."""
+"""Vertices of an ellipse that is drawn; the polygon then holds 0.9987 of the ellipse's area."""
+POLYGON_VERTICES = 36
+"""Vertices of an ellipse in a file: it is widened by a quarter of a percent to the right area."""
 POLAR_VERTICES = 720
 """Vertices where meridians converge, so that no side spans many degrees of longitude."""
 _WIDE_SIDE_DEG = 10.0
@@ -28,20 +30,30 @@ def ellipse_rings(
     bearing_deg: Float[np.ndarray, " n"],
     *,
     vertices: int = VERTICES,
+    widened: float = 1.0,
 ) -> Float[np.ndarray, "n v 2"]:
     """Vertices (lon, lat in degrees) of ellipses laid on the ground, counter-clockwise, not closed.
 
     The vertex at angle f stands at the end of the geodesic that leaves the centre with length
     r = hypot(M cos f, m sin f) and azimuth bearing - atan2(m sin f, M cos f): the direct problem
-    of Karney (2013), J. Geod. 87:43-55. Semi-axes under 1 cm are drawn as 1 cm.
+    of Karney (2013), J. Geod. 87:43-55. Semi-axes under 1 cm are drawn as 1 cm; both are then made
+    `widened` times as long.
     """
     angle = 2 * np.pi * np.arange(vertices) / vertices
-    along = np.maximum(major_m, _LEAST_AXIS_M)[:, None] * np.cos(angle)
-    across = np.maximum(minor_m, _LEAST_AXIS_M)[:, None] * np.sin(angle)
+    along = widened * np.maximum(major_m, _LEAST_AXIS_M)[:, None] * np.cos(angle)
+    across = widened * np.maximum(minor_m, _LEAST_AXIS_M)[:, None] * np.sin(angle)
     azimuth = np.asarray(bearing_deg)[:, None] - np.degrees(np.arctan2(across, along))
     lons, lats = (np.broadcast_to(np.asarray(a)[:, None], along.shape) for a in (lon, lat))
     ring_lon, ring_lat, _ = WGS84.fwd(lons, lats, azimuth, np.hypot(along, across))
     return np.stack([ring_lon, ring_lat], axis=-1)
+
+
+def equal_area_factor(vertices: int) -> float:
+    """How much longer axes must be for the polygon to have the ellipse's area.
+
+    The vertices cut the ellipse into triangles of area a b sin(2 pi / v) / 2.
+    """
+    return float(np.sqrt(2 * np.pi / (vertices * np.sin(2 * np.pi / vertices))))
 
 
 def ellipse_polygons(
@@ -54,7 +66,7 @@ def ellipse_polygons(
     """Ellipses on the ground as an (n,) object array of `shapely.MultiPolygon`, in degrees.
 
     They are cut at the antimeridian; one that holds a pole reaches along the whole parallel up
-    (or down) to the pole. Outer rings are counter-clockwise.
+    (or down) to the pole. Outer rings are counter-clockwise. Each has its ellipse's area.
 
     Examples
     --------
@@ -67,15 +79,18 @@ def ellipse_polygons(
     axes = [np.asarray(a, dtype=float) for a in (lon, lat, major_m, minor_m, bearing_deg)]
     if not len(axes[0]):
         return np.empty(0, dtype=object)
-    rings = ellipse_rings(*axes)
+    rings = _area_true(axes, POLYGON_VERTICES)
     whole = shapely.multipolygons(shapely.polygons(rings)[:, None])
     step = np.abs(np.diff(rings[..., 0], axis=1, append=rings[:, :1, 0]))
     side = np.minimum(step, 360 - step).max(axis=1)
     for i in np.flatnonzero((step.max(axis=1) > 180) | (side > _WIDE_SIDE_DEG)):
-        n = POLAR_VERTICES if side[i] > _WIDE_SIDE_DEG else VERTICES
-        ring = ellipse_rings(*(a[i : i + 1] for a in axes), vertices=n)[0]
-        whole[i] = cut_ring(ring)
+        n = POLAR_VERTICES if side[i] > _WIDE_SIDE_DEG else POLYGON_VERTICES
+        whole[i] = cut_ring(_area_true([a[i : i + 1] for a in axes], n)[0])
     return whole
+
+
+def _area_true(axes: Sequence[np.ndarray], vertices: int) -> Float[np.ndarray, "n v 2"]:
+    return ellipse_rings(*axes, vertices=vertices, widened=equal_area_factor(vertices))
 
 
 def cut_ring(ring: Float[np.ndarray, "v 2"]) -> shapely.MultiPolygon:

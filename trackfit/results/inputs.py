@@ -45,6 +45,22 @@ JUDGEMENT_COLUMNS = (
 """The columns of a judgement's table, in order."""
 
 
+class StatusLike(Protocol):
+    """How a fit ended."""
+
+    @property
+    def name(self) -> str:
+        """One word for programs."""
+
+    @property
+    def sentence(self) -> str:
+        """The sentence for the user."""
+
+    @property
+    def ok(self) -> bool:
+        """True if the fit can be used."""
+
+
 class TrackLike(Protocol):
     """One tag's positions at regular times, and paths drawn from the same posterior."""
 
@@ -64,21 +80,9 @@ class TrackLike(Protocol):
     def draw_times(self) -> pd.DatetimeIndex:
         """Times of the drawn paths: those of the table, and more where they round the land."""
 
-
-class StatusLike(Protocol):
-    """How a fit ended."""
-
     @property
-    def name(self) -> str:
-        """One word for programs."""
-
-    @property
-    def sentence(self) -> str:
-        """The sentence for the user."""
-
-    @property
-    def ok(self) -> bool:
-        """True if the fit can be used."""
+    def fit_status(self) -> StatusLike:
+        """How the fit ended that the positions are from."""
 
 
 class FitLike(Protocol):
@@ -151,6 +155,10 @@ class ResponseLike(Protocol):
     @property
     def upper95(self) -> Float[np.ndarray, " m"]:
         """Upper edge of the 95 % band, km^2/h."""
+
+    @property
+    def fit_status(self) -> StatusLike:
+        """How the fit ended that the response is from."""
 
 
 class JudgementLike(Protocol):

@@ -29,7 +29,7 @@ class Results:
     folder
         Where they stand.
     positions
-        Tag, then the columns of a filled track; times in UTC, degrees, metres, hours.
+        Tag, fit_status, then the columns of a filled track; times in UTC, degrees, metres, hours.
     parameters
         Tag, status, parameter, unit, estimate, sd, lower95, upper95.
     set_aside
@@ -87,7 +87,7 @@ def read_results(folder: Path) -> Results:
 def _positions(folder: Path) -> pd.DataFrame:
     for name, reader in _POSITION_READERS.items():
         if (folder / name).exists():
-            return _read(folder / name, reader).loc[:, ["tag", *POSITION_COLUMNS]]
+            return _read(folder / name, reader).loc[:, [*tables.OF_THE_TAG, *POSITION_COLUMNS]]
     raise ResultsError(
         f"{folder}: holds none of {', '.join(_POSITION_READERS)}; "
         "ask for the format csv in the study and run it again"
@@ -114,8 +114,10 @@ def _from_netcdf(path: Path) -> pd.DataFrame:
     with xr.open_dataset(path, engine="h5netcdf", decode_timedelta=False) as data:
         sizes = data["row_size"].to_numpy()
         table = pd.DataFrame({name: data[name].to_numpy() for name in POSITION_COLUMNS})
-        tags = np.repeat(data["tag"].to_numpy().astype(str), sizes)
-    return _typed(table.assign(tag=tags, time=table["time"].dt.tz_localize("UTC")))
+        whose = {
+            name: np.repeat(data[name].to_numpy().astype(str), sizes) for name in tables.OF_THE_TAG
+        }
+    return _typed(table.assign(**whose, time=table["time"].dt.tz_localize("UTC")))
 
 
 def _from_geopackage(path: Path) -> pd.DataFrame:

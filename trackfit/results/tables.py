@@ -25,6 +25,8 @@ from trackfit.results.inputs import (
 DRAWS_COMPRESSED_FROM_ROWS = 200_000
 """From so many rows on, drawn paths are written as .csv.gz."""
 SET_ASIDE_COLUMNS = ("file", "line", "tag", "time", "lon", "lat", "reason")
+OF_THE_TAG = ("tag", "fit_status")
+"""What stands before the columns of a filled track: whose it is, and how the fit ended."""
 _PARAMETER_COLUMNS = ("parameter", "unit", "estimate", "sd", "lower95", "upper95", "role")
 _NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?")
 _ACTIVE = frozenset("=+-@\t\r＝＋－＠'")  # the wide forms are run by East Asian spreadsheets
@@ -66,16 +68,17 @@ def iso_times(times: pd.Series) -> list[str]:
 
 
 def write_positions(path: Path, tracks: Sequence[TrackLike]) -> None:
-    """Write the positions of all tags: tag, then the columns of a filled track's table."""
+    """Write the positions of all tags: tag, fit_status, then the columns of a filled track."""
     _write(path, positions_table(tracks), _position_format)
 
 
 def positions_table(tracks: Sequence[TrackLike]) -> pd.DataFrame:
-    """Return the tables of all tracks, one under the other, with the column tag in front."""
-    parts = [t.table.loc[:, list(POSITION_COLUMNS)].assign(tag=t.tag) for t in tracks]
+    """Return the tables of all tracks, one under the other, tag and fit_status in front."""
+    columns = [*OF_THE_TAG, *POSITION_COLUMNS]
+    parts = [t.table.assign(tag=t.tag, fit_status=t.fit_status.name) for t in tracks]
     if not parts:
-        return pd.DataFrame(columns=["tag", *POSITION_COLUMNS])
-    return pd.concat(parts, ignore_index=True).loc[:, ["tag", *POSITION_COLUMNS]]
+        return pd.DataFrame(columns=columns)
+    return pd.concat(parts, ignore_index=True).loc[:, columns]
 
 
 def write_parameters(path: Path, fits: Sequence[FitLike]) -> None:
@@ -92,14 +95,14 @@ def write_set_aside(path: Path, set_aside: pd.DataFrame) -> None:
 
 
 def write_responses(path: Path, responses: Sequence[ResponseLike]) -> None:
-    """Write every response: tag, term, layer, unit, at (in unit), h and its 95 % band in km^2/h."""
+    """Write every response: whose and of what, at (in unit), h and its 95 % band in km^2/h."""
     parts = [
         pd.DataFrame({"at": r.at, "h": r.h, "lower95": r.lower95, "upper95": r.upper95}).assign(
-            tag=r.tag, term=r.term, layer=r.layer, unit=r.unit
+            tag=r.tag, fit_status=r.fit_status.name, term=r.term, layer=r.layer, unit=r.unit
         )
         for r in responses
     ]
-    columns = ["tag", "term", "layer", "unit", "at", "h", "lower95", "upper95"]
+    columns = [*OF_THE_TAG, "term", "layer", "unit", "at", "h", "lower95", "upper95"]
     table = pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=columns)
     _write(path, table.loc[:, columns], lambda _: "{:.9g}")
 
@@ -198,6 +201,7 @@ def read_table(path: Path) -> pd.DataFrame:
 _TEXT = frozenset(
     {
         "tag",
+        "fit_status",
         "status",
         "role",
         "parameter",

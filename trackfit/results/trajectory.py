@@ -52,7 +52,11 @@ def write_trajectory(
     path: Path, tracks: Sequence[TrackLike], about: Discovery | None = None
 ) -> None:
     """Write positions and ellipses of all tracks to a CF-1.8 NetCDF file."""
-    to_xarray(tracks, about).to_netcdf(path, engine="h5netcdf")
+    data = to_xarray(tracks, about)
+    for name, variable in data.variables.items():
+        if variable.dims == ("obs",):
+            data[name].encoding |= {"compression": "gzip", "compression_opts": 6, "shuffle": True}
+    data.to_netcdf(path, engine="h5netcdf")
 
 
 def to_xarray(tracks: Sequence[TrackLike], about: Discovery | None = None) -> xr.Dataset:
@@ -72,13 +76,19 @@ def to_xarray(tracks: Sequence[TrackLike], about: Discovery | None = None) -> xr
 def _instances(tracks: Sequence[TrackLike]) -> dict[str, xr.Variable]:
     sizes = np.array([len(t.table) for t in tracks], dtype=np.int32)
     tags = np.array([t.tag for t in tracks], dtype=str)
+    words = np.array([t.fit_status.name for t in tracks], dtype=str)
     name = {"long_name": "name of the tag", "cf_role": "trajectory_id"}
+    ended = {"long_name": "how the fit ended; rely on the positions where it is CONVERGED"}
     count = {"long_name": "number of positions of the tag", "sample_dimension": "obs"}
-    text = {"dtype": "S1", "char_dim_name": "tag_length"}
     return {
-        "tag": xr.Variable("trajectory", tags, name, encoding=text),
+        "tag": xr.Variable("trajectory", tags, name, encoding=_text("tag_length")),
+        "fit_status": xr.Variable("trajectory", words, ended, encoding=_text("status_length")),
         "row_size": xr.Variable("trajectory", sizes, count),
     }
+
+
+def _text(length: str) -> dict[str, str]:
+    return {"dtype": "S1", "char_dim_name": length}
 
 
 def _coordinates(table: pd.DataFrame) -> dict[str, xr.Variable]:

@@ -11,7 +11,7 @@ from bisect import bisect_left, insort
 from collections.abc import Sequence
 from dataclasses import dataclass
 from heapq import heappop, heappush
-from typing import Protocol
+from typing import Protocol, runtime_checkable
 
 import numpy as np
 from jaxtyping import Bool, Float, Int
@@ -89,6 +89,7 @@ class Chain:
         return speeds
 
 
+@runtime_checkable
 class NeighbourTest(Protocol):
     """A test of a fix against its neighbours."""
 
