@@ -13,6 +13,7 @@ from numpy.polynomial.polynomial import polyder, polyval2d
 from scipy.interpolate import NdBSpline, RectBivariateSpline, make_interp_spline
 
 from trackfit.layers.splines import (
+    BLOCK,
     JET_ORDERS,
     JET_ROW,
     bracket_times,
@@ -308,3 +309,17 @@ def test_the_gradient_of_a_potential_on_the_sphere():
         theirs = theirs[row, col].ravel()
         rms = np.sqrt(np.mean((ours[name] - theirs) ** 2) / np.mean(theirs**2))
         assert rms < 0.005, (name, rms)
+
+
+def test_very_many_points_are_each_their_own():
+    """Blocks of points change nothing but the time it takes."""
+    layer = bumpy_layer(2, times=3, components=2)
+    spline, rng = fit_spline(layer), np.random.default_rng(8)
+    points = 2 * BLOCK + 5
+    x, y = rng.uniform(-20.0, 20.0, (2, points))
+    when = bracket_times(layer, rng.uniform(layer.hours[0], layer.hours[-1], points))
+    whole = np.asarray(spline_jet(spline, when, jnp.asarray(x), jnp.asarray(y), 2))
+    some = np.r_[0:3, BLOCK - 1 : BLOCK + 2, points - 2 : points]
+    part = type(when)(*(values[some] for values in when))
+    alone = np.asarray(spline_jet(spline, part, jnp.asarray(x[some]), jnp.asarray(y[some]), 2))
+    np.testing.assert_allclose(whole[..., some], alone, rtol=1e-12, atol=1e-12)

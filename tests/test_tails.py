@@ -199,7 +199,8 @@ def test_many_fixes_are_each_their_own_and_padding_is_unseen():
         for name in ("log_z", "mean_km", "covariance_km2", "by_log_scale", "by_log_nu"):
             both = getattr(whole, name)[k], getattr(alone, name)[0]
             assert np.allclose(*both, rtol=1e-11, atol=1e-13)
-    assert [padded_fixes(n) for n in (0, 1, 128, 129, 256, 257)] == [128, 128, 128, 256, 256, 512]
+    sizes = [padded_fixes(n) for n in (0, 1, 128, 129, 193, 256, 257, 1500)]
+    assert sizes == [128, 128, 128, 192, 256, 256, 384, 1536]
     assert weight_nodes(np.log(4.0), 1e12)[0][0] < np.log(1e-12)
 
 

@@ -131,13 +131,19 @@ def split(
     band: Float[np.ndarray, "n dim 2*dim"],
 ) -> tuple[Float[np.ndarray, "n dim dim"], Float[np.ndarray, "n-1 dim dim"]]:
     """Diagonal blocks, and the blocks below them."""
-    n, dim, _ = band.shape
     lower = lower_triangles(band)
-    below = np.empty((n - 1, dim, dim))
-    for c in range(dim):
-        below[:, :, c] = band[:-1, c, dim - c : 2 * dim - c]
+    for c in range(band.shape[1]):
         lower[:, c, c + 1 :] = lower[:, c + 1 :, c]
-    return lower, below
+    return lower, blocks_below(band[:-1])
+
+
+def blocks_below(columns: Float[np.ndarray, "k dim 2*dim"]) -> Float[np.ndarray, "k dim dim"]:
+    """Blocks below the diagonal in some block columns of a matrix in banded storage."""
+    dim = columns.shape[1]
+    below = np.empty((len(columns), dim, dim))
+    for c in range(dim):
+        below[:, :, c] = columns[:, c, dim - c : 2 * dim - c]
+    return below
 
 
 def joined(

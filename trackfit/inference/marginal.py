@@ -54,11 +54,13 @@ SITE_TOLERANCE = 1e-6
 class Warm:
     """Where an approximation starts: states, and sites where tails are heavy.
 
-    `basis` is the field's at the states where it is known: layers are then not asked again.
+    `adjoint` is that of the last spread, and serves the first round of sweeps. `basis` is the
+    field's at the states where it is known: layers are then not asked again.
     """
 
     states: Float[np.ndarray, "states dim"]
     sites: Sites | None = None
+    adjoint: Float[np.ndarray, "states dim"] | None = None
     basis: Basis | None = None
 
 
@@ -84,8 +86,10 @@ class Approximation:
     @property
     def warm(self) -> Warm:
         """A start for nearby parameters."""
-        sites = self.mode.sites if self.problem.observations.heavy else None
-        return Warm(self.mode.states, sites, self.mode.point.basis)
+        basis = self.mode.point.basis
+        if not self.problem.observations.heavy:
+            return Warm(self.mode.states, basis=basis)
+        return Warm(self.mode.states, self.mode.sites, self.spread.adjoint, basis)
 
     @cached_property
     def spread(self) -> Spread:
@@ -166,7 +170,14 @@ class _Linear:
     own: Float[np.ndarray, "fixes 2"]
 
     @classmethod
-    def at(cls, problem: TrackProblem, point: Point, spread: Spread, *, exact: bool) -> Self:
+    def at(
+        cls,
+        problem: TrackProblem,
+        point: Point,
+        adjoint: Float[np.ndarray, "states dim"],
+        *,
+        exact: bool,
+    ) -> Self:
         """Integrate out the states without fixes; they have a Gaussian of their own."""
         seen, observations = problem.observations.seen
         none = Sites.none(len(observations.state))
@@ -175,7 +186,7 @@ class _Linear:
             reduced = Reduced.of(band, point.gradient, seen)
         except NotPositiveDefinite:
             raise ModeNotFound("the Hessian between fixes is indefinite") from None
-        own = spread.adjoint[problem.observations.state, :2]
+        own = adjoint[problem.observations.state, :2]
         return cls(observations, point.states[seen], reduced, own)
 
     def factored(self, sites: Sites) -> tuple[Float[np.ndarray, "kept dim 2*dim"], Cholesky]:
@@ -244,11 +255,13 @@ def _propagate(
     point = evaluate_at(problem, theta, warm.states, warm.basis)
     if not np.isfinite(point.value):
         raise ModeNotFound("the density is not finite at the start")
-    sweeps, mixer, patience = 0, SiteMixer(), Patience()
+    sweeps, mixer, patience, adjoint = 0, SiteMixer(), Patience(), warm.adjoint
     for rounds in range(MAX_ROUNDS):
         sites, band, cholesky, exact = _factored(problem, point, sites)
-        spread = spread_around(problem, theta, point, band, cholesky)
-        linear = _Linear.at(problem, point, spread, exact=exact)
+        fresh = adjoint is None or rounds > 0
+        if adjoint is None or fresh:
+            adjoint = spread_around(problem, theta, point, band, cholesky).adjoint
+        linear = _Linear.at(problem, point, adjoint, exact=exact)
         band_seen, factor_seen = linear.towards(sites, sites)[1:]
         for _ in range(SWEEPS_PER_ROUND):
             decrement, mean, covariance = linear.marginals(sites, band_seen, factor_seen)
@@ -263,7 +276,7 @@ def _propagate(
                 break
             wanted = mixer.proposed(sites, matched_sites(sites, cavity, moments), covariance)
             sites, band_seen, factor_seen = linear.towards(sites, wanted)
-        if moved < site_tolerance and decrement < tolerance:
+        if fresh and moved < site_tolerance and decrement < tolerance:
             if not exact:
                 raise ModeNotFound("the Hessian is indefinite where the gradient vanishes")
             if not cavity.sound.all():

@@ -18,7 +18,7 @@ from typing import Self
 import numpy as np
 from jaxtyping import Float, Int
 
-from trackfit.inference.banded import factor, joined, lower_triangles, split, with_held
+from trackfit.inference.banded import blocks_below, factor, joined, lower_triangles, with_held
 
 
 @dataclass(frozen=True)
@@ -57,10 +57,9 @@ class Reduced:
         n, dim, _ = band.shape
         kept = np.zeros(n, bool)
         kept[at] = True
-        diagonal, below = split(band)
-        own, pull = diagonal[at], gradient[at]
+        own, pull = lower_triangles(band[at]), gradient[at]
         number = np.cumsum(kept) - 1
-        across = below[at[1:] - 1].copy()
+        across = blocks_below(band[at[1:] - 1])
         free = np.flatnonzero(~kept)
         if not free.size:
             return cls(at, joined(own, across), pull, 0.0)
@@ -70,13 +69,13 @@ class Reduced:
         right[-1] = np.where(kept[:, None], 0.0, gradient)
         before = at[at < n - 1]
         before = before[~kept[before + 1]]
-        right[:dim, before + 1] = below[before].transpose(2, 0, 1)
+        right[:dim, before + 1] = blocks_below(band[before]).transpose(2, 0, 1)
         left = factored.solve_factor(right.reshape(dim + 1, -1).T).T.reshape(right.shape)
         # what the state after a gap does reaches only the gap's last block of L^-1
         after = at[at > 0]
         after = after[~kept[after - 1]]
         blocks = lower_triangles(factored.storage.T.reshape(band.shape)[after - 1])
-        ahead = below[after - 1] @ np.swapaxes(np.linalg.inv(blocks), 1, 2)
+        ahead = blocks_below(band[after - 1]) @ np.swapaxes(np.linalg.inv(blocks), 1, 2)
         reached = np.einsum("kab,rkb->kar", ahead, left[:, after - 1])
         row = number[after]
         own[row] -= ahead @ np.swapaxes(ahead, 1, 2)

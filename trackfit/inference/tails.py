@@ -145,8 +145,11 @@ def _padded(values: Float[np.ndarray, "fixes ..."], n: int) -> Float[np.ndarray,
 
 
 def padded_fixes(n: int) -> int:
-    """Compiled size for a number of fixes: 128, 256, 512, ..."""
-    return 128 * 2 ** max(0, int(np.ceil(np.log2(max(n, 1) / 128) - 1e-9)))
+    """Compiled size for a number of fixes: 128, 192, 256, 384, 512, 768, ..."""
+    size = 128
+    while size < n:
+        size = size * 3 // 2 if size & (size - 1) == 0 else size * 4 // 3
+    return size
 
 
 @jax.jit

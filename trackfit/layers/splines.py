@@ -41,6 +41,9 @@ DEGREE = 5
 NODES = DEGREE + 1
 """Nodes of the stencil along one axis."""
 
+BLOCK = 16384
+"""Points whose stencils are held at once, where there are very many."""
+
 PADDING = (DEGREE - 1) // 2
 """Mirrored nodes on every side of the grid, so that the stencil never leaves it."""
 
@@ -138,8 +141,32 @@ def spline_jet(
     """All partial derivatives up to `order` (at most 4) of a layer at points, unit per km^order.
 
     Linear in time between slices. Beyond the grid the point is moved to the nearest edge.
-    Row order is `JET_ORDERS`.
+    Row order is `JET_ORDERS`. Very many points are taken in blocks, whose stencils stay in the
+    processor's cache: that halves the time.
     """
+    points = x_km.shape[0]
+    if points <= 2 * BLOCK:
+        return _jet(spline, when, x_km, y_km, order)
+    blocks = -(-points // BLOCK)
+
+    def in_blocks(values: Array) -> Array:
+        padded = jnp.pad(values, (0, blocks * BLOCK - points), mode="edge")
+        return padded.reshape(blocks, BLOCK)
+
+    jets = jax.lax.map(
+        lambda block: _jet(spline, TimeBracket(block[0], block[1]), block[2], block[3], order),
+        tuple(in_blocks(values) for values in (*when, x_km, y_km)),
+    )
+    return jnp.moveaxis(jets, 0, 2).reshape(*jets.shape[1:3], -1)[..., :points]
+
+
+def _jet(
+    spline: Spline,
+    when: TimeBracket,
+    x_km: Float[Array, " points"],
+    y_km: Float[Array, " points"],
+    order: int,
+) -> Float[Array, "components rows points"]:
     orders = JET_ORDERS[: jet_rows(order)]
     times, components, ny, nx = spline.coefficients.shape
     col, weights_x = _stencil(x_km, spline.origin_km[0], spline.spacing_km, nx - 2 * PADDING)
