@@ -118,10 +118,10 @@ def wrap(lon):
 
 def make_fit(tag="seal 7", status=Status.converged):
     rows = [
-        ("sigma", "km h^-1/2", 1.8, 0.1, 1.6, 2.0),
-        ("drift", "1", 0.9, float("nan"), float("nan"), float("nan")),
+        ("sigma", "km h^-1/2", 1.8, 0.1, 1.6, 2.0, "estimated"),
+        ("drift", "1", 0.9, float("nan"), float("nan"), float("nan"), "shared"),
     ]
-    columns = ["parameter", "unit", "estimate", "sd", "lower95", "upper95"]
+    columns = ["parameter", "unit", "estimate", "sd", "lower95", "upper95", "role"]
     return OneFit(tag, status, pd.DataFrame(rows, columns=columns))
 
 

@@ -89,6 +89,7 @@ def test_parameters_and_missing_numbers(tmp_path):
     assert back["tag"].tolist() == ["a", "a", "b", "b"]
     assert back["estimate"].tolist() == [1.8, 0.9, 1.8, 0.9]
     assert back["sd"].isna().tolist() == [False, True, False, True]
+    assert back["role"].tolist() == ["estimated", "shared"] * 2
     assert "nan" not in (tmp_path / "f.csv").read_text().lower()
 
 

@@ -15,14 +15,16 @@ from trackfit.errors import ErrorRules, fix_covariances
 from trackfit.faults import LayerError
 from trackfit.fixes import Fixes
 from trackfit.frame import Plane
-from trackfit.inference.fit import MIN_FIXES, Fit, fit_track
+from trackfit.inference.fit import MIN_FIXES, Fit
 from trackfit.inference.grid import time_grid
+from trackfit.inference.shared import Task, fit_shared
+from trackfit.inference.smoothing import revise_shared
 from trackfit.inference.task import FitSettings, TrackData
 from trackfit.judgement import FixJudgement, judge_fixes
 from trackfit.layers import Coast, Layer, LayerRequest, read_coast, read_layer
 from trackfit.model import StudyModel, build_model
 from trackfit.paths import FilledTrack, fill_track, hours_since_1970, report_hours, times_utc
-from trackfit.responses import Response, responses_of
+from trackfit.responses import Response, responses_of, shared_responses
 from trackfit.study import Study
 from trackfit.usable import error_rules, study_area, usable_fixes
 
@@ -81,6 +83,11 @@ class Prepared:
         hours = self.tracks[tag].hours
         return report_hours(hours[0], hours[-1], self.study.paths.interval_hours)
 
+    def fitted_together(self) -> list[list[str]]:
+        """The tags in groups: one by one, or all together where they share a response."""
+        tags = self.fixes.tags
+        return [tags] if self.model.base.parameters.shared_at.size else [[tag] for tag in tags]
+
     def input_files(self) -> dict[str, Path]:
         """Every file the study reads, by the name the study gives it."""
         study = self.study
@@ -131,7 +138,13 @@ def prepare(study: Study) -> Prepared:
         layers=layers,
         coast=read_coast(study.coast.file, plane, box) if study.coast else None,
         model=build_model(study, used, plane),
-        notes=(*fixes.notes, *_few_notes(tracks), *_layer_notes(study, layers), *far_off),
+        notes=(
+            *fixes.notes,
+            *_few_notes(tracks),
+            *_layer_notes(study, layers),
+            *_sharing_notes(study, fixes),
+            *far_off,
+        ),
         warnings=_distortion_warning(plane, lon, lat),
     )
 
@@ -178,6 +191,14 @@ def _layer_notes(study: Study, layers: Mapping[str, Layer]) -> list[str]:
         if layer.share_filled > 0
     ]
     return sorted(notes)
+
+
+def _sharing_notes(study: Study, fixes: Fixes) -> list[str]:
+    shared = [f"preference.{p.term}" for p in study.preference if p.shared]
+    shared += ["current.drift"] if study.current and study.current.shared else []
+    if len(fixes.tags) > 1:
+        return []
+    return [f"{name}: shared by all tags, and the study has but one" for name in shared]
 
 
 def _distortion_warning(plane: Plane, lon: np.ndarray, lat: np.ndarray) -> tuple[str, ...]:
@@ -241,7 +262,7 @@ def _stamp(hour: float) -> str:
 
 
 def fit_tags(prepared: Prepared, progress: TagProgress = _silent) -> list[Fit]:
-    """Fit every tag of a study, one after the other.
+    """Fit every tag of a study, one after the other; where they share a response, over and over.
 
     A tag that cannot be fitted has a status that says so; the others are fitted all the same.
 
@@ -250,7 +271,37 @@ def fit_tags(prepared: Prepared, progress: TagProgress = _silent) -> list[Fit]:
     LayerError
         A fitted path leaves the area of a layer that the model uses.
     """
-    return [_fit_tag(prepared, tag, progress) for tag in prepared.fixes.tags]
+    return [
+        _inside_layers(prepared, fit)
+        for tags in prepared.fitted_together()
+        for fit in fit_tracks(
+            prepared,
+            [prepared.tracks[tag] for tag in tags],
+            [prepared.report_hours(tag) for tag in tags],
+            progress,
+        )
+    ]
+
+
+def fit_tracks(
+    prepared: Prepared,
+    tracks: Sequence[TrackData],
+    report: Sequence[Float[np.ndarray, " n"]],
+    progress: TagProgress = _silent,
+) -> list[Fit]:
+    """Fit a study's model to any tracks, with the times to report of each.
+
+    Tracks that share a response are fitted together.
+    """
+    model, settings = prepared.model, fit_settings(prepared.study)
+    return fit_shared(
+        [
+            Task(track, model.for_track(track), settings, hours)
+            for track, hours in zip(tracks, report, strict=True)
+        ],
+        progress,
+        revise_shared,
+    )
 
 
 def fit_settings(study: Study) -> FitSettings:
@@ -264,19 +315,12 @@ def fit_settings(study: Study) -> FitSettings:
     )
 
 
-def _fit_tag(prepared: Prepared, tag: str, progress: TagProgress) -> Fit:
-    study, data = prepared.study, prepared.tracks[tag]
-    fit = fit_track(
-        data,
-        prepared.model.for_track(data),
-        fit_settings(study),
-        prepared.report_hours(tag),
-        lambda done, message: progress(tag, done, message),
-    )
+def _inside_layers(prepared: Prepared, fit: Fit) -> Fit:
+    """The fit, if its path stays inside the layers of its model."""
     if fit.states is not None:
         hours, at_km = fit.states.problem.hours, fit.states.mean[:, :2]
-        for layer in used_layers(study, prepared.layers).values():
-            _check_inside(tag, "fitted path", hours, at_km, layer, prepared.plane)
+        for layer in used_layers(prepared.study, prepared.layers).values():
+            _check_inside(fit.tag, "fitted path", hours, at_km, layer, prepared.plane)
     return fit
 
 
@@ -313,8 +357,13 @@ def _filled(prepared: Prepared, fit: Fit) -> FilledTrack:
 
 
 def preference_responses(prepared: Prepared, fits: Sequence[Fit]) -> list[Response]:
-    """The response of every fitted tag to every preference term."""
-    return [r for fit in fits for r in responses_of(fit, prepared.model.names)]
+    """The response of every fitted tag to every preference term.
+
+    A term that the tags share has one response, of `ALL_TAGS`.
+    """
+    names = prepared.model.names
+    own = [r for fit in fits for r in responses_of(fit, names)]
+    return [*own, *shared_responses(fits, names)]
 
 
 def fix_judgements(prepared: Prepared, fits: Sequence[Fit]) -> list[FixJudgement]:

@@ -120,7 +120,8 @@ def build_model(study: Study, layers: Mapping[str, Layer], plane: Plane) -> Stud
             terms.append(_layer_term(preference, splines[layer.name], standards[layer.name], layer))
             names.append(TermName(preference.term, layer.name, layer.unit))
         behind.append(layer)
-        parameters += _term_parameters(study, preference, layer, standards)
+        own = _term_parameters(study, preference, layer, standards)
+        parameters += [replace(p, shared=preference.shared) for p in own]
     current = layers[study.current.layer] if study.current else None
     motion = MOTIONS[study.motion.kind]
     return StudyModel(
@@ -290,6 +291,7 @@ def _drift_parameter(study: Study) -> list[Parameter]:
             prior_sd=sd if estimated and study.fit.priors == "weak" else np.inf,
             reach=0.5,
             fixed=not estimated,
+            shared=study.current.shared,
         )
     ]
 

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from jaxtyping import Float
@@ -15,10 +16,13 @@ from trackfit.motion.terms import TermName
 
 POINTS = 101
 
+ALL_TAGS = "all tags"
+"""Stands for the tag of a response that all tags share."""
+
 
 @dataclass(frozen=True)
 class Response:
-    """How much one tag likes each value of a layer, or each distance from a point.
+    """How much one tag, or all, likes each value of a layer, or each distance from a point.
 
     Attributes
     ----------
@@ -47,21 +51,58 @@ class Response:
 
 
 def responses_of(fit: Fit, names: tuple[TermName, ...]) -> list[Response]:
-    """The response to every preference term of a fitted tag; none where nothing was fitted."""
+    """The response to every preference term a fitted tag has for itself; none if not fitted."""
     if fit.states is None:
         return []
-    first = len(fit.model.motion.parameters)
-    found = []
-    for slot, (term, name) in enumerate(zip(fit.model.field.terms, names, strict=True)):
-        places = range(first, first + term.n_amplitudes)
-        found.append(_response(fit, slot, name, np.array(places)))
+    return [
+        _response(fit, slot, name, places, _along_path(fit, slot))
+        for slot, (name, places) in enumerate(zip(names, _places(fit), strict=True))
+        if not _is_shared(fit, places)
+    ]
+
+
+def shared_responses(fits: Sequence[Fit], names: tuple[TermName, ...]) -> list[Response]:
+    """The response to every preference term that tags share, over all values their paths met.
+
+    Tags whose fits failed are left out, unless all did.
+    """
+    fitted = [fit for fit in fits if fit.states is not None]
+    fitted = [fit for fit in fitted if fit.status.ok] or fitted
+    if not fitted:
+        return []
+    return [
+        replace(
+            _response(
+                fitted[0],
+                slot,
+                name,
+                places,
+                np.concatenate([_along_path(fit, slot) for fit in fitted]),
+            ),
+            tag=ALL_TAGS,
+        )
+        for slot, (name, places) in enumerate(zip(names, _places(fitted[0]), strict=True))
+        if _is_shared(fitted[0], places)
+    ]
+
+
+def _places(fit: Fit) -> list[np.ndarray]:
+    """Where each term's amplitudes stand in the full vector of parameters."""
+    first, found = len(fit.model.motion.parameters), []
+    for term in fit.model.field.terms:
+        found.append(np.arange(first, first + term.n_amplitudes))
         first += term.n_amplitudes
     return found
 
 
-def _response(fit: Fit, slot: int, name: TermName, places: np.ndarray) -> Response:
+def _is_shared(fit: Fit, places: np.ndarray) -> bool:
+    return bool(np.isin(places, fit.model.parameters.shared_at).all())
+
+
+def _response(
+    fit: Fit, slot: int, name: TermName, places: np.ndarray, on_path: Float[np.ndarray, " n"]
+) -> Response:
     assert fit.states is not None
-    on_path = _along_path(fit, slot)
     at = np.linspace(on_path.min(), on_path.max(), POINTS)
     basis = _basis(fit, slot, at)
     theta = fit.states.approximation.theta[places]

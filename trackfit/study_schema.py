@@ -200,6 +200,11 @@ class Preference(Table):
         "sides. `smooth`: a curve, as wiggly as the fixes ask for. `distance`: towards or away "
         "from a point.",
     )
+    shared: bool = setting(
+        False,
+        "All tags of the study have the same coefficients in this term, estimated from all of them "
+        "together; everything else stays a tag's own.",
+    )
 
     @property
     def term(self) -> str:
@@ -229,6 +234,15 @@ class Current(Table):
         "Share of the water's velocity the animal takes on: `estimated`, or a number between 0 "
         "(not carried) and 2; 1 is carried wholly.",
     )
+    shared: bool = setting(
+        False, "All tags of the study have the same drift, estimated from all of them together."
+    )
+
+    @model_validator(mode="after")
+    def _shared_is_estimated(self) -> Self:
+        if self.shared and self.drift != ESTIMATED:
+            refuse("a drift that is given is the same for all tags already", key="shared")
+        return self
 
 
 class Errors(Table):

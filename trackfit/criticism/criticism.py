@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import zlib
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from jaxtyping import Float
@@ -76,6 +76,8 @@ class Effect:
         positive); NaN for other shapes.
     shape
         linear, humped, distance, smooth or drift.
+    shared
+        Whether the estimates are of all tags of the study together.
     """
 
     term: str
@@ -86,6 +88,7 @@ class Effect:
     p_value: float
     best: float = float("nan")
     unit: str = ""
+    shared: bool = False
 
     @property
     def found(self) -> bool:
@@ -304,25 +307,34 @@ def effects_of(fit: Fit, names: Sequence[TermName]) -> list[Effect]:
     for term, name in zip(fit.model.field.terms, names, strict=True):
         places = range(first, first + term.n_amplitudes)
         first += term.n_amplitudes
-        amplitudes, covariance = _amplitudes(fit.states, places)
+        amplitudes, covariance = _amplitudes(fit, places)
+        shared = fit.model.parameters.all[places[0]].shared
         if isinstance(term, DistanceTerm):
-            found.append(_effect(name.term, "distance", amplitudes, covariance))
+            effect = _effect(name.term, "distance", amplitudes, covariance)
+            found.append(replace(effect, shared=shared))
             continue
         shape = {1: "linear", 2: "humped"}.get(term.n_amplitudes, "smooth")
         best = float("nan")
         if shape == "humped" and amplitudes[1] != 0.0:
             top = -amplitudes[0] / (2.0 * amplitudes[1])
             best = float(term.centre) + float(term.scale) * float(top)
-        found.append(_effect(name.term, shape, amplitudes, covariance, best, name.unit))
+        effect = _effect(name.term, shape, amplitudes, covariance, best, name.unit)
+        found.append(replace(effect, shared=shared))
     if fit.model.field.current is not None and first in fit.states.free_at:
-        found.append(_effect(DRIFT, "drift", *_amplitudes(fit.states, [first])))
+        effect = _effect(DRIFT, "drift", *_amplitudes(fit, [first]))
+        found.append(replace(effect, shared=fit.model.parameters.all[first].shared))
     return found
 
 
 def _amplitudes(
-    states: States, places: Sequence[int]
+    fit: Fit, places: Sequence[int]
 ) -> tuple[Float[np.ndarray, " k"], Float[np.ndarray, "k k"]]:
+    """Estimates and their covariance; of shared ones those of all tags, which no points have."""
+    states = fit.states
+    assert states is not None
     mean, covariance = _posterior(states)
+    if fit.model.parameters.all[places[0]].shared:
+        mean, covariance = states.theta, states.theta_covariance
     at = [list(states.free_at).index(place) for place in places]
     return mean[at], covariance[np.ix_(at, at)]
 

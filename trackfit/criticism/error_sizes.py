@@ -21,7 +21,6 @@ from trackfit.inference.estimates import NORMAL_95
 from trackfit.inference.fit import Fit, fit_track
 from trackfit.inference.laplace import ModeNotFound
 from trackfit.inference.marginal import approximate
-from trackfit.inference.parameters import ParameterSet
 from trackfit.inference.predicted import Predicted
 from trackfit.inference.task import FitSettings, TrackData
 
@@ -135,7 +134,7 @@ def _with_scale_free(fit: Fit, data: TrackData, place: int) -> Fit:
     parameters[place] = replace(
         parameters[place], fixed=False, prior_mean=0.0, prior_sd=SCALE_PRIOR_LOG_SD
     )
-    model = replace(fit.model, parameters=ParameterSet(tuple(parameters)))
+    model = replace(fit.model, parameters=replace(fit.model.parameters, all=tuple(parameters)))
     return fit_track(
         data, model, FitSettings(step_hours=fit.step_hours, coarse_factor=1), np.zeros(0)
     )

@@ -19,10 +19,10 @@ import numpy as np
 import pandas as pd
 from jaxtyping import Bool, Float, Int
 
-from trackfit.analysis import Prepared, TagProgress, fit_settings
+from trackfit.analysis import Prepared, TagProgress, fit_tracks
 from trackfit.counted import counted
 from trackfit.frame import Plane, geodesic_km
-from trackfit.inference.fit import MIN_FIXES, FitStatus, fit_track
+from trackfit.inference.fit import MIN_FIXES, Fit, FitStatus
 from trackfit.inference.grid import nearest_state
 from trackfit.inference.predicted import Predicted
 from trackfit.inference.states import States
@@ -103,7 +103,11 @@ def hold_out(
     block_hours
         Hide all fixes in stretches of this length; None hides single fixes.
     """
-    parts = {tag: _try_tag(prepared, tag, share, block_hours, progress) for tag in prepared.tracks}
+    parts = {
+        tag: part
+        for tags in prepared.fitted_together()
+        for tag, part in _try_tags(prepared, tags, share, block_hours, progress).items()
+    }
     tables = [table for _, table in parts.values() if len(table)]
     whole = pd.concat(tables, ignore_index=True) if tables else _no_fixes()
     kept = sum(kept for (_, kept), _ in parts.values())
@@ -118,27 +122,43 @@ def _no_fixes() -> pd.DataFrame:
     return pd.DataFrame({name: pd.Series(dtype=float) for name in HIDDEN_COLUMNS})
 
 
-def _try_tag(
+_Tried = tuple[tuple[FitStatus | None, int], pd.DataFrame]
+"""Status and number of fixes kept of one tag, and its hidden fixes."""
+
+
+def _try_tags(
     prepared: Prepared,
-    tag: str,
+    tags: Sequence[str],
     share: float,
     block_hours: float | None,
     progress: TagProgress,
-) -> tuple[tuple[FitStatus | None, int], pd.DataFrame]:
-    data = prepared.tracks[tag]
-    rng = np.random.default_rng([prepared.study.study.seed, zlib.crc32(tag.encode()), 1])
-    block = hidden_blocks(data.hours, share, block_hours, rng)
-    kept = _part(data, block < 0)
-    if (block < 0).all():
-        return (None, len(kept.hours)), _no_fixes()
-    hidden = _part(data, block >= 0)
-    fit = fit_track(
-        kept,
-        prepared.model.for_track(kept),
-        fit_settings(prepared.study),
-        hidden.hours,
-        lambda done, message: progress(f"{tag}, some fixes hidden", done, message),
+) -> dict[str, _Tried]:
+    """Hide fixes of some tags that are fitted together, all at once."""
+    blocks = {tag: _blocks(prepared, tag, share, block_hours) for tag in tags}
+    tried = [tag for tag in tags if (blocks[tag] >= 0).any()]
+    kept = {tag: _part(prepared.tracks[tag], blocks[tag] < 0) for tag in tags}
+    fits = fit_tracks(
+        prepared,
+        [kept[tag] for tag in tried],
+        [prepared.tracks[tag].hours[blocks[tag] >= 0] for tag in tried],
+        lambda tag, done, message: progress(f"{tag}, some fixes hidden", done, message),
     )
+    found = {fit.tag: _tried(prepared, kept[fit.tag], blocks[fit.tag], fit) for fit in fits}
+    nothing = {tag: ((None, len(kept[tag].hours)), _no_fixes()) for tag in tags}
+    return nothing | found
+
+
+def _blocks(
+    prepared: Prepared, tag: str, share: float, block_hours: float | None
+) -> Int[np.ndarray, " fixes"]:
+    rng = np.random.default_rng([prepared.study.study.seed, zlib.crc32(tag.encode()), 1])
+    return hidden_blocks(prepared.tracks[tag].hours, share, block_hours, rng)
+
+
+def _tried(
+    prepared: Prepared, kept: TrackData, block: Int[np.ndarray, " fixes"], fit: Fit
+) -> _Tried:
+    hidden = _part(prepared.tracks[fit.tag], block >= 0)
     if fit.states is None:
         return (fit.status, len(kept.hours)), _no_fixes()
     table = _foretold(fit.states, kept, hidden, prepared.plane, _at_sea(prepared, fit.states))

@@ -310,7 +310,8 @@ def _effects(criticism: Criticism) -> Findings:
 
 
 def _chance(effect: Effect) -> str:
-    return "p < 0.001" if effect.p_value < 0.001 else f"p = {effect.p_value:.2g}"
+    chance = "p < 0.001" if effect.p_value < 0.001 else f"p = {effect.p_value:.2g}"
+    return f"all tags together: {chance}" if effect.shared else chance
 
 
 def _preferred(effect: Effect) -> str:

@@ -7,7 +7,7 @@ import pandas as pd
 from jaxtyping import Float
 
 from trackfit.inference.integrate import WeightedPoints
-from trackfit.inference.parameters import ParameterSet
+from trackfit.inference.parameters import Parameter, ParameterSet
 from trackfit.inference.smoothing import effective_bends
 from trackfit.motion import Motion
 
@@ -25,12 +25,13 @@ def parameter_table(
 
     From weighted points: posterior means on the engine's scale, turned to the reported one (of a
     positive parameter its median, nearly), and weighted quantiles. Else the mode, with intervals
-    normal on the engine's scale. For a smooth term there is a row with the number of bends that the
-    data tell.
+    normal on the engine's scale. Shared parameters are of that kind always: one tag's points know
+    nothing of how the others see them. For a smooth term there is a row with the number of bends
+    that the data tell.
     """
     free_at, size = parameters.free_at, len(parameters.all)
     names = [
-        (p.name, p.unit, p.positive, np.eye(size)[i], "fixed" if p.fixed else "estimated")
+        (p.name, p.unit, p.positive, np.eye(size)[i], _role(p))
         for i, p in enumerate(parameters.all)
         if p.reported
     ]
@@ -45,7 +46,7 @@ def parameter_table(
         value = float(combination @ start)
         spread = float(np.sqrt(max(along @ covariance @ along, 0.0)))
         interval = (value - NORMAL_95 * spread, value + NORMAL_95 * spread)
-        if points is not None and along.any():
+        if points is not None and along.any() and role != "shared":
             values = value + (points.at - free) @ along
             value = float(points.weight @ values)
             spread = float(np.sqrt(points.weight @ (values - value) ** 2))
@@ -54,6 +55,12 @@ def parameter_table(
     for name, bends in effective_bends(parameters, covariance).items():
         rows.append(_row(f"{name}.bends", "1", False, bends, 0.0, (bends, bends), "chosen"))
     return pd.DataFrame(rows)
+
+
+def _role(parameter: Parameter) -> str:
+    if parameter.fixed:
+        return "fixed"
+    return "shared" if parameter.shared else "estimated"
 
 
 def _row(

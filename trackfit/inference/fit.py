@@ -56,6 +56,10 @@ class FitStatus(Enum):
     NO_MODE = (
         "No most probable path was found; check the fixes and their errors, or use a shorter step."
     )
+    NOT_SETTLED = (
+        "The tags had not agreed on the responses they share when the sweeps over them ended; "
+        "estimates and intervals are not to be trusted."
+    )
     TOO_FEW_FIXES = "The tag has too few usable fixes to fit; nothing was estimated."
 
     @property
@@ -76,8 +80,8 @@ class Fit:
     Attributes
     ----------
     parameters
-        One row a parameter: parameter, unit, estimate, sd, lower95, upper95, role (estimated, fixed
-        derived from others, or chosen: the bends of a smooth term).
+        One row a parameter: parameter, unit, estimate, sd, lower95, upper95, role (estimated,
+        shared by all tags, fixed, derived from others, or chosen: the bends of a smooth term).
     log_marginal
         Laplace log marginal likelihood of the fixes (in km) at the estimates, priors left out.
     step_check
@@ -102,6 +106,9 @@ class Fit:
 
 Progress = Callable[[float, str], None]
 
+Start = tuple[Float[np.ndarray, " free"], Float[np.ndarray, "free free"]]
+"""Where a search begins: parameters, and a first guess of the Hessian."""
+
 
 def _silent(done: float, message: str) -> None:
     """Take no notice of progress."""
@@ -113,15 +120,18 @@ def fit_track(
     settings: FitSettings,
     report_hours: Float[np.ndarray, " n"],
     progress: Progress = _silent,
+    begin: Start | None = None,
 ) -> Fit:
     """Fit a model to one track by the fast engine.
 
-    Never raises for what the data do: the status says how it ended.
+    Never raises for what the data do: the status says how it ended. With `begin` the search starts
+    there, without the coarse grid.
     """
     if len(data.hours) < MIN_FIXES:
         return _empty(data, model, settings, FitStatus.TOO_FEW_FIXES)
     search = Search(data, model, settings.step_hours, report_hours)
-    found = _searched(search, _starts(search, data, model, settings, progress), settings, progress)
+    starts = _starts(search, data, model, settings, progress) if begin is None else iter([begin])
+    found = _searched(search, starts, settings, progress)
     if found is None:
         return _empty(data, model, settings, FitStatus.NO_MODE)
     found = settle(search, found, settings.max_iterations)
@@ -136,10 +146,6 @@ def fit_track(
         fit = _with_step_check(fit, data, settings, report_hours, ending.hessian)
     progress(1.0, "done")
     return fit
-
-
-Start = tuple[Float[np.ndarray, " free"], Float[np.ndarray, "free free"]]
-"""Where a search begins: parameters, and a first guess of the Hessian."""
 
 
 def _starts(

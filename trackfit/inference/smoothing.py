@@ -45,6 +45,37 @@ def smooth_groups(parameters: ParameterSet) -> dict[str, Float[np.ndarray, " ben
     return {name: np.array(at) for name, at in groups.items()}
 
 
+def _own_groups(parameters: ParameterSet) -> dict[str, Float[np.ndarray, " bends"]]:
+    """Those whose tau is the track's own affair: no joint prior stands in its place."""
+    joint = parameters.joint
+    held = set() if joint is None else set(parameters.places(joint.at))
+    groups = smooth_groups(parameters)
+    return {name: at for name, at in groups.items() if not held.intersection(at)}
+
+
+def revise_shared(
+    parameters: ParameterSet,
+    mean: Float[np.ndarray, " shared"],
+    covariance: Float[np.ndarray, "shared shared"],
+) -> ParameterSet:
+    """The set with the tau of every smooth term that tags share updated, if it had not settled.
+
+    Parameters
+    ----------
+    mean, covariance
+        Of the shared parameters, by all tags.
+    """
+    shared_at = parameters.shared_at
+    shared = ParameterSet(tuple(parameters.all[i] for i in shared_at))
+    changed, settled = with_spread(shared, mean, np.linalg.inv(covariance))
+    if settled:
+        return parameters
+    every = list(parameters.all)
+    for place, parameter in zip(shared_at, changed.all, strict=True):
+        every[place] = parameter
+    return replace(parameters, all=tuple(every))
+
+
 def effective_bends(
     parameters: ParameterSet, covariance: Float[np.ndarray, "free free"]
 ) -> dict[str, float]:
@@ -69,7 +100,7 @@ def with_spread(
     free, hessian
         The mode, and the Hessian of the negative log posterior there.
     """
-    groups = smooth_groups(parameters)
+    groups = _own_groups(parameters)
     floor = np.array([1e-6 * p.reach**-2.0 for p in parameters.free])
     before = _prior_precision(parameters)
     mean = np.array([p.prior_mean for p in parameters.free])
@@ -101,7 +132,7 @@ def with_spread(
         for name in groups
     )
     every = tuple(
-        p if p.smooth is None else replace(p, prior_sd=tau[p.smooth]) for p in parameters.all
+        replace(p, prior_sd=tau[p.smooth]) if p.smooth in tau else p for p in parameters.all
     )
     return replace(parameters, all=every), settled
 
@@ -111,7 +142,7 @@ def settle(search: Search, found: Minimum, max_iterations: int) -> Minimum:
 
     A search that does not converge, or finds no mode, ends it.
     """
-    if not smooth_groups(search.parameters):
+    if not _own_groups(search.parameters):
         return found
     for _ in range(MOST_TURNS):
         if not found.converged:

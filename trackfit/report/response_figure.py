@@ -10,6 +10,7 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
 
 from trackfit.report import style
+from trackfit.responses import ALL_TAGS
 from trackfit.results.inputs import ResponseLike
 
 TAGS_IN_ONE_PANEL = len(style.CYCLE)
@@ -96,7 +97,7 @@ def response_figure(
     rows = -(-len(panels) // _COLUMNS)
     columns = -(-len(panels) // rows)
     alone = len({r.term for panel in panels for r in panel}) == 1 and len(panels) > 1
-    tags = {r.tag for panel in panels for r in panel}
+    tags = {r.tag for panel in panels for r in panel} - {ALL_TAGS}
     whose = f" of tag {next(iter(tags))}" if len(tags) == 1 else ""
     title = f"Preference: {panels[0][0].term}" if alone else f"Preferences{whose}"
     width = max(columns * _PANEL_IN[0], 6.2) + 0.3

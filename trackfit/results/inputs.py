@@ -98,7 +98,7 @@ class FitLike(Protocol):
 
     @property
     def parameters(self) -> pd.DataFrame:
-        """Columns parameter, unit, estimate, sd, lower95, upper95."""
+        """Columns parameter, unit, estimate, sd, lower95, upper95, role."""
 
     @property
     def log_marginal(self) -> float:

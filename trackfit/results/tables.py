@@ -27,7 +27,7 @@ DRAWS_COMPRESSED_FROM_ROWS = 200_000
 SET_ASIDE_COLUMNS = ("file", "line", "tag", "time", "lon", "lat", "reason")
 OF_THE_TAG = ("tag", "fit_status")
 """What stands before the columns of a filled track: whose it is, and how the fit ended."""
-_PARAMETER_COLUMNS = ("parameter", "unit", "estimate", "sd", "lower95", "upper95")
+_PARAMETER_COLUMNS = ("parameter", "unit", "estimate", "sd", "lower95", "upper95", "role")
 _NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?")
 _ACTIVE = frozenset("=+-@\t\r＝＋－＠'")  # the wide forms are run by East Asian spreadsheets
 
@@ -82,7 +82,7 @@ def positions_table(tracks: Sequence[TrackLike]) -> pd.DataFrame:
 
 
 def write_parameters(path: Path, fits: Sequence[FitLike]) -> None:
-    """Write the parameters of all fits: tag, status, parameter, unit, estimate, sd, 95 % limits."""
+    """Write the parameters of all fits: tag, status, estimates with 95 % limits, and their role."""
     parts = [f.parameters.assign(tag=f.tag, status=f.status.name) for f in fits]
     columns = ["tag", "status", *_PARAMETER_COLUMNS]
     table = pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=columns)
@@ -203,6 +203,7 @@ _TEXT = frozenset(
         "tag",
         "fit_status",
         "status",
+        "role",
         "parameter",
         "unit",
         "term",
