@@ -18,12 +18,12 @@ def parameter_table(
     motion: Motion,
     free: Float[np.ndarray, " free"],
     covariance: Float[np.ndarray, "free free"],
-    points: WeightedPoints | None = None,
+    sample: WeightedPoints | None = None,
 ) -> pd.DataFrame:
     """Estimates on the reported scale, with standard deviations and 95 % intervals.
 
-    From weighted points: posterior means on the engine's scale, turned to the reported one (of a
-    positive parameter its median, nearly), and weighted quantiles. Else the mode, with intervals
+    From a sample of the posterior: means on the engine's scale, turned to the reported one (of a
+    positive parameter its median, nearly), and quantiles. Else the mode, with intervals
     normal on the engine's scale.
     """
     free_at, size = parameters.free_at, len(parameters.all)
@@ -43,11 +43,11 @@ def parameter_table(
         value = float(combination @ start)
         spread = float(np.sqrt(max(along @ covariance @ along, 0.0)))
         interval = (value - NORMAL_95 * spread, value + NORMAL_95 * spread)
-        if points is not None and along.any():
-            values = value + (points.at - free) @ along
-            value = float(points.weight @ values)
-            spread = float(np.sqrt(points.weight @ (values - value) ** 2))
-            interval = (points.quantile(values, 0.025), points.quantile(values, 0.975))
+        if sample is not None and along.any():
+            values = value + (sample.at - free) @ along
+            value = float(sample.weight @ values)
+            spread = float(np.sqrt(sample.weight @ (values - value) ** 2))
+            interval = (sample.quantile(values, 0.025), sample.quantile(values, 0.975))
         rows.append(_row(name, unit, positive, value, spread, interval, role))
     return pd.DataFrame(rows)
 
