@@ -126,6 +126,7 @@ def fit_track(
             coarse = Search(data, model, coarse_step, np.zeros(0))
             found = coarse.run(start, metric, settings.max_iterations, _part(progress, 0.0, 0.3))
             start, metric = found.at, coarse.metric(found)
+            fine.start_from(coarse)
         found = fine.run(start, metric, settings.max_iterations, _part(progress, 0.3, 0.6))
         progress(0.6, "uncertainty")
         hessian = fine.hessian(found)
