@@ -81,6 +81,25 @@ def test_where_there_is_no_value_there_is_no_point():
     assert len(found.calls) == len(found.points.weight)
 
 
+@pytest.mark.parametrize("count", [1, 2, 5])
+def test_few_points_are_points(count):
+    found = explore(standard_normal, np.zeros(2), np.eye(2), count, 0)
+    assert len(found.points.weight) == count - count // 4
+    assert found.points.weight.sum() == pytest.approx(1.0)
+
+
+def test_where_only_the_mode_has_a_value_it_is_the_point():
+    def lonely(x):
+        if np.any(x != 0.0):
+            raise Rejected
+        return standard_normal(x)
+
+    found = explore(lonely, np.zeros(2), np.eye(2), 16, 0)
+    assert found.calls.tolist() == [0]
+    assert found.points.at.tolist() == [[0.0, 0.0]]
+    assert found.points.weight.tolist() == [1.0]
+
+
 def test_every_point_knows_its_call():
     asked = []
 

@@ -136,12 +136,17 @@ def _sobol(
 def _weighted(
     seen: _Seen, batches: list[tuple[np.ndarray, np.ndarray]]
 ) -> tuple[WeightedPoints, Int[np.ndarray, " points"]]:
-    """The drawn points that have a density; each batch weighs as much as it has points."""
-    calls = np.concatenate([at for at, _ in batches])
-    weights = [normalised(log_weight) * len(log_weight) for _, log_weight in batches]
-    weight = np.concatenate(weights) / len(calls)
-    kept = weight > 0.0
-    return WeightedPoints(seen.free(seen.y[calls[kept]]), weight[kept]), calls[kept]
+    """The drawn points that have a density, batches weighted by number; the mode if none has."""
+    calls, weights = [], []
+    for at, log_weight in batches:
+        kept = np.isfinite(log_weight)
+        if kept.any():
+            calls.append(at[kept])
+            weights.append(normalised(log_weight[kept]) * len(at))
+    if not calls:
+        calls, weights = [np.zeros(1, int)], [np.ones(1)]
+    at, weight = np.concatenate(calls), np.concatenate(weights)
+    return WeightedPoints(seen.free(seen.y[at]), weight / weight.sum()), at
 
 
 class _Seen:
@@ -179,6 +184,8 @@ class _Seen:
                 value, gradient = self.density(at)
             except Rejected:
                 continue
+            if not np.isfinite(value) or not np.isfinite(gradient).all():
+                continue
             excess[i] = value - self.top + 0.5 * float(y[i] @ y[i])
             slope[i] = self.axes.T @ gradient + y[i]
         self.y = np.concatenate([self.y, y])
@@ -206,9 +213,7 @@ class _Seen:
     def usable(self) -> Int[np.ndarray, " usable"]:
         """The calls that an emulator is told: not too deep down, and not too many."""
         above = self.excess - 0.5 * np.sum(self.y**2, axis=1)
-        usable = np.flatnonzero(
-            (above > -NEGLIGIBLE) & np.isfinite(above) & np.isfinite(self.slope).all(axis=1)
-        )
+        usable = np.flatnonzero(above > -NEGLIGIBLE)
         most = max(MOST_NUMBERS // (1 + len(self.mode)), MOST_NUMBERS // 8)
         if len(usable) > most:
             usable = usable[np.linspace(0, len(usable) - 1, most).astype(int)]
