@@ -48,6 +48,17 @@ def test_gradients_are_worth_points(monkeypatch):
     assert errors[0] < 0.2 * errors[1]
 
 
+def test_one_wild_point_does_not_swing_the_rest():
+    """A spike of 2 with slopes of 30 at one point of forty: elsewhere the rms error stays small."""
+    y, value, slope = seen(40)
+    value[7] += 2.0
+    slope[7] += 30.0
+    there = np.random.default_rng(1).normal(size=(500, 2))
+    wanted, _ = bent(there)
+    off = emulate(y, value, slope).excess(there) - wanted
+    assert np.sqrt(np.median(off**2)) < 0.3
+
+
 def test_far_away_nothing_is_added():
     found = emulate(*seen(40))
     assert found.excess(np.array([[80.0, -60.0]])) == pytest.approx([0.0], abs=1e-12)

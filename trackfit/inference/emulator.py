@@ -14,6 +14,7 @@ stand-in costs nothing, where the density itself is dear (Rasmussen 2003, Bayesi
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import product
 
 import numpy as np
 from jaxtyping import Float
@@ -22,8 +23,13 @@ from scipy.linalg import LinAlgError, cho_solve, cholesky
 LENGTHS = (1.0, 1.5, 2.0, 3.0, 4.5, 7.0)
 """Lengths l that are tried, in standard deviations; the likeliest is taken."""
 
-NUGGET = 1e-6
-"""Share of the variance left to rounding and to the tolerance of the density's own iterations."""
+NUGGETS = (1e-6, 1e-3, 1e-1)
+"""Shares of the variance that may be noise; the likeliest is taken.
+
+Rounding and the tolerance of the density's own iterations ask for the least. A density with jumps
+or spikes, where a path has two modes, asks for more: without, the process would swing between the
+points.
+"""
 
 MOST_NUMBERS = 2000
 """Beyond so many values and slopes the slopes are left out: the cost goes as the cube."""
@@ -57,16 +63,16 @@ def emulate(
     excess: Float[np.ndarray, " points"],
     slope: Float[np.ndarray, "points dim"],
 ) -> Emulator:
-    """Condition the process on values and gradients of r; l is the likeliest of `LENGTHS`."""
+    """Condition the process on values and gradients of r; l and noise are the likeliest."""
     n, dim = at.shape
     with_slopes = n * (1 + dim) <= MOST_NUMBERS
     data = np.column_stack([excess, slope]).ravel() if with_slopes else excess
     best, chosen = -np.inf, Emulator(at, LENGTHS[-1], np.zeros(n), np.zeros((n, dim)))
-    for length in LENGTHS:
+    for length, nugget in product(LENGTHS, NUGGETS):
         covariance = _covariance(at, length, with_slopes)
-        covariance[np.diag_indices_from(covariance)] *= 1.0 + NUGGET
+        covariance[np.diag_indices_from(covariance)] *= 1.0 + nugget
         try:
-            root = cholesky(covariance, lower=True)
+            root = cholesky(covariance, lower=True, overwrite_a=True)
         except LinAlgError:
             continue
         solved = cho_solve((root, True), data)
