@@ -34,7 +34,7 @@ def test_values_and_gradients_are_met():
 
 
 def test_gradients_are_worth_points(monkeypatch):
-    """Between forty points: with gradients the rms error is a fifth of that without, or less."""
+    """Between forty points: with gradients the rms error is half of that without, or less."""
     y, value, slope = seen(40)
     there = np.random.default_rng(1).normal(size=(500, 2))
     wanted, _ = bent(there)
@@ -45,18 +45,22 @@ def test_gradients_are_worth_points(monkeypatch):
         assert found.slopes.any() == (most > 0)
         errors.append(np.sqrt(np.mean((found.excess(there) - wanted) ** 2)))
     assert errors[0] < 0.02
-    assert errors[0] < 0.2 * errors[1]
+    assert errors[0] < 0.5 * errors[1]
 
 
-def test_one_wild_point_does_not_swing_the_rest():
-    """A spike of 2 with slopes of 30 at one point of forty: elsewhere the rms error stays small."""
+def test_a_wild_point_is_taken_for_noise(monkeypatch):
+    """A spike of 2 with slopes of 30 at one point of forty: without noise the rest swings."""
     y, value, slope = seen(40)
     value[7] += 2.0
     slope[7] += 30.0
     there = np.random.default_rng(1).normal(size=(500, 2))
     wanted, _ = bent(there)
-    off = emulate(y, value, slope).excess(there) - wanted
-    assert np.sqrt(np.median(off**2)) < 0.3
+    errors = []
+    for nuggets in (emulator.NUGGETS, (1e-6,)):
+        monkeypatch.setattr(emulator, "NUGGETS", nuggets)
+        off = emulate(y, value, slope).excess(there) - wanted
+        errors.append(np.sqrt(np.mean(off**2)))
+    assert errors[0] < 0.7 * errors[1]
 
 
 def test_far_away_nothing_is_added():

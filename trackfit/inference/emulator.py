@@ -20,7 +20,7 @@ import numpy as np
 from jaxtyping import Float
 from scipy.linalg import LinAlgError, cho_solve, cholesky
 
-LENGTHS = (1.0, 1.5, 2.0, 3.0, 4.5, 7.0)
+LENGTHS = (1.5, 3.0, 6.0)
 """Lengths l that are tried, in standard deviations; the likeliest is taken."""
 
 NUGGETS = (1e-6, 1e-3, 1e-1)

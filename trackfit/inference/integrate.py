@@ -2,8 +2,8 @@
 
 Posteriors of variances and of tails are skewed. A few points far out on the principal axes and a
 scrambled Sobol sequence around the mode tell an emulator of the log posterior
-(`trackfit.inference.emulator`) its shape; further points are drawn from the emulated density, in
-two batches, and tell it the rest. The last emulator is sampled at length: the estimates come from
+(`trackfit.inference.emulator`) its shape; further points are drawn from the emulated density, batch
+by batch, and tell it the rest. The last emulator is sampled at length: the estimates come from
 there. The drawn points, weighted by true over emulated density (importance sampling), keep their
 states, so positions average over parameters without linearising in them.
 """
@@ -32,6 +32,9 @@ WIDENED = 1.3
 
 NEGLIGIBLE = 15.0
 """Points whose log density lies so far below the mode's tell the emulator nothing of use."""
+
+BATCHES = 6
+"""Batches of drawn points: where the emulated density reaches too far, the next learns of it."""
 
 WALKERS, ROUNDS, LONG_ROUNDS, APART = 128, 60, 300, 5
 """Markov chains, their rounds for a batch and for the sample, and rounds between what is taken."""
@@ -109,11 +112,11 @@ def explore(
     seen.evaluated(_sobol(first, stretch, seed))
     walkers = seen.y[rng.choice(seen.usable(), WALKERS)]
     batches = []
-    for size in ((count - first) // 2, count - first - (count - first) // 2):
+    for some in np.array_split(np.arange(first, count), BATCHES):
         emulator = seen.emulator()
-        path = walk(emulator, walkers, max(ROUNDS, APART * -(-size // WALKERS)), rng)
+        path = walk(emulator, walkers, max(ROUNDS, APART * -(-len(some) // WALKERS)), rng)
         walkers = path[-1]
-        drawn = path[::-APART].reshape(-1, len(mode))[:size]
+        drawn = path[::-APART].reshape(-1, len(mode))[: len(some)]
         calls = seen.evaluated(drawn)
         batches.append((calls, seen.excess[calls] - emulator.excess(drawn)))
     path = walk(seen.emulator(), walkers, LONG_ROUNDS, rng)[LONG_ROUNDS // 5 :: APART]
@@ -136,13 +139,14 @@ def _sobol(
 def _weighted(
     seen: _Seen, batches: list[tuple[np.ndarray, np.ndarray]]
 ) -> tuple[WeightedPoints, Int[np.ndarray, " points"]]:
-    """The drawn points that have a density, batches weighted by number; the mode if none has."""
+    """The drawn points that have a density, batches by their effective number; or else the mode."""
     calls, weights = [], []
     for at, log_weight in batches:
         kept = np.isfinite(log_weight)
         if kept.any():
             calls.append(at[kept])
-            weights.append(normalised(log_weight[kept]) * len(at))
+            weight = normalised(log_weight[kept])
+            weights.append(weight / np.sum(weight**2))
     if not calls:
         calls, weights = [np.zeros(1, int)], [np.ones(1)]
     at, weight = np.concatenate(calls), np.concatenate(weights)
