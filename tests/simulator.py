@@ -141,12 +141,16 @@ def path_estimates(sea: Sea, hours: Array, xy_km: Array) -> Array:
 
 
 class Fixes(NamedTuple):
-    """What a tag reports: path index and hour of each fix, positions, error covariances (km^2)."""
+    """What a tag reports: path index and hour of each fix, positions, error covariances (km^2).
+
+    `thrown` marks the fixes thrown off.
+    """
 
     at: Array
     hours: Array
     xy_km: Array
     covariance_km2: Array
+    thrown: Array
 
 
 @dataclass(frozen=True)
@@ -168,7 +172,9 @@ class Tag:
     tail
         Degrees of freedom of bivariate Student-t errors with the covariance as shape; None: normal.
     outliers
-        Share of fixes thrown off by a further `outlier_km` in a random direction.
+        Share of fixes thrown off by a further distance in a random direction.
+    outlier_km
+        Shortest and longest such distance (uniform).
     """
 
     every_hours: tuple[float, float]
@@ -178,20 +184,24 @@ class Tag:
     gaps: int = 0
     tail: float | None = None
     outliers: float = 0.0
-    outlier_km: float = 50.0
+    outlier_km: tuple[float, float] = (50.0, 50.0)
 
     def observe(self, hours: Array, xy_km: Array, rng: np.random.Generator) -> Fixes:
         """Report one path, (steps + 1,) hours and (steps + 1, 2) positions."""
-        at = self._moments(hours, rng)
+        return self.observe_at(self._moments(hours, rng), hours, xy_km, rng)
+
+    def observe_at(self, at: Array, hours: Array, xy_km: Array, rng: np.random.Generator) -> Fixes:
+        """Report a path at the given places on it."""
         covariance = self._covariances(len(at), rng)
         white = rng.standard_normal((len(at), 2))
         error = np.einsum("nab,nb->na", np.linalg.cholesky(covariance), white)
         if self.tail is not None:
             error /= np.sqrt(rng.chisquare(self.tail, (len(at), 1)) / self.tail)
         thrown, bearing = rng.random(len(at)) < self.outliers, rng.uniform(0, 2 * np.pi, len(at))
-        far = self.outlier_km * np.stack([np.sin(bearing), np.cos(bearing)], axis=1)
+        far = rng.uniform(*self.outlier_km, (len(at), 1))
+        far = far * np.stack([np.sin(bearing), np.cos(bearing)], axis=1)
         error += np.where(thrown[:, None], far, 0.0)
-        return Fixes(at, hours[at], xy_km[at] + error, covariance)
+        return Fixes(at, hours[at], xy_km[at] + error, covariance, thrown)
 
     def _moments(self, hours: Array, rng: np.random.Generator) -> Array:
         span, step = hours[-1] - hours[0], hours[1] - hours[0]

@@ -304,8 +304,8 @@ class Fit(Table):
     )
     points: int = setting(
         128,
-        "Weighted points that stand for the parameters' posterior, which is often skewed; "
-        "estimates, intervals and positions average over them. 0 takes the plain normal "
+        "Points at which the parameters' posterior, often skewed, is evaluated; estimates, "
+        "intervals and positions average over what they show. 0 takes the plain normal "
         "approximation, which is faster.",
         ge=0,
         le=8192,

@@ -292,11 +292,11 @@ def _kind_factors(states: States, residuals: Residuals, kinds: np.ndarray) -> di
 
 
 def _posterior(states: States) -> tuple[Float[np.ndarray, " free"], Float[np.ndarray, "free free"]]:
-    """Mean and covariance of the free parameters: of the weighted points, if they are enough."""
+    """Mean and covariance of the free parameters: of the posterior's sample, if there is one."""
     enough = POINTS_A_PARAMETER * len(states.theta)
-    if states.points is None or states.points.effective < enough:
+    if states.sample is None or states.sample.effective < enough:
         return states.theta, states.theta_covariance
-    return states.points.mean, states.points.covariance
+    return states.sample.mean, states.sample.covariance
 
 
 def effects_of(fit: Fit, names: Sequence[TermName]) -> list[Effect]:

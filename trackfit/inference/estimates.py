@@ -19,15 +19,15 @@ def parameter_table(
     motion: Motion,
     free: Float[np.ndarray, " free"],
     covariance: Float[np.ndarray, "free free"],
-    points: WeightedPoints | None = None,
+    sample: WeightedPoints | None = None,
 ) -> pd.DataFrame:
     """Estimates on the reported scale, with standard deviations and 95 % intervals.
 
-    From weighted points: posterior means on the engine's scale, turned to the reported one (of a
-    positive parameter its median, nearly), and weighted quantiles. Else the mode, with intervals
-    normal on the engine's scale. Shared parameters are of that kind always: one tag's points know
-    nothing of how the others see them. For a smooth term there is a row with the number of bends
-    that the data tell.
+    From a sample of the posterior: means on the engine's scale, turned to the reported one (of a
+    positive parameter its median, nearly), and quantiles. Else the mode, with intervals normal on
+    the engine's scale. Shared parameters are of that kind always: one tag's points know nothing of
+    how the others see them. For a smooth term there is a row with the number of bends that the
+    data tell.
     """
     free_at, size = parameters.free_at, len(parameters.all)
     names = [
@@ -46,11 +46,11 @@ def parameter_table(
         value = float(combination @ start)
         spread = float(np.sqrt(max(along @ covariance @ along, 0.0)))
         interval = (value - NORMAL_95 * spread, value + NORMAL_95 * spread)
-        if points is not None and along.any() and role != "shared":
-            values = value + (points.at - free) @ along
-            value = float(points.weight @ values)
-            spread = float(np.sqrt(points.weight @ (values - value) ** 2))
-            interval = (points.quantile(values, 0.025), points.quantile(values, 0.975))
+        if sample is not None and along.any() and role != "shared":
+            values = value + (sample.at - free) @ along
+            value = float(sample.weight @ values)
+            spread = float(np.sqrt(sample.weight @ (values - value) ** 2))
+            interval = (sample.quantile(values, 0.025), sample.quantile(values, 0.975))
         rows.append(_row(name, unit, positive, value, spread, interval, role))
     for name, bends in effective_bends(parameters, covariance).items():
         rows.append(_row(f"{name}.bends", "1", False, bends, 0.0, (bends, bends), "chosen"))

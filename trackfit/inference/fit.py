@@ -22,7 +22,7 @@ import pandas as pd
 from jaxtyping import Float
 
 from trackfit.inference.estimates import parameter_table
-from trackfit.inference.integrate import PathMixture, WeightedPoints, lay_points, normalised
+from trackfit.inference.integrate import PathMixture, explore
 from trackfit.inference.laplace import mode_sensitivity
 from trackfit.inference.optimise import Minimum, Rejected, nearest_positive
 from trackfit.inference.search import TOLERANCE, Search
@@ -160,6 +160,7 @@ def _starts(
             found = coarse.run(*plain, settings.max_iterations, _part(progress, 0.0, 0.3))
             found = settle(coarse, found, settings.max_iterations)
             search.parameters = coarse.parameters
+            search.start_from(coarse)
             yield found.at, coarse.metric(found)
         except Rejected:
             pass
@@ -248,7 +249,7 @@ def _conclude(
     return Fit(
         tag=data.tag,
         status=status,
-        parameters=parameter_table(parameters, model.motion, found.at, covariance, states.points),
+        parameters=parameter_table(parameters, model.motion, found.at, covariance, states.sample),
         log_marginal=-best.negative_log_marginal,
         n_fixes=len(data.hours),
         n_states=problem.n_states,
@@ -289,38 +290,37 @@ def _with_step_check(
 
 
 def _with_points(search: Search, states: States, count: int, progress: Progress) -> States:
-    """Weighted points for the parameters' posterior, with the positions at each.
+    """Explore the parameters' posterior; keep the positions at its weighted points.
 
     Raises
     ------
     Rejected
         The density has no value at the mode, or at none of the points.
     """
+    n = states.problem.n_states
+    kept: list[tuple[np.ndarray, np.ndarray] | None] = []
 
-    def log_density(free: Float[np.ndarray, " free"]) -> float:
-        return -search.value(free)
+    def density(free: Float[np.ndarray, " free"]) -> tuple[float, Float[np.ndarray, " free"]]:
+        progress(0.7 + 0.3 * min(len(kept) / count, 1.0), "weighing parameters")
+        kept.append(None)
+        value, gradient = search(free)
+        found = search.with_spread(free)
+        blocks = np.asarray(found.spread.steps.covariance)[:2, :2, :n]
+        means = (found.mode.states + found.spread.adjoint)[:, :2]
+        kept[-1] = means, np.moveaxis(blocks, -1, 0)
+        return -value, -gradient
 
     seed = zlib.crc32(states.theta.tobytes())
-    at, log_design = lay_points(log_density, states.theta, states.theta_covariance, count, seed)
-    log_weight, means, covariances = np.full(count, -np.inf), [], []
-    n = states.problem.n_states
-    for i, point in enumerate(at):
-        progress(0.7 + 0.3 * i / count, "weighing parameters")
-        try:
-            log_weight[i] = log_density(point) - log_design[i]
-            found = search.with_spread(point)
-        except Rejected:
-            log_weight[i], found = -np.inf, states.approximation
-        means.append((found.mode.states + found.spread.adjoint)[:, :2])
-        blocks = np.asarray(found.spread.steps.covariance)[:2, :2, :n]
-        covariances.append(np.moveaxis(blocks, -1, 0))
-    log_weight[~np.isfinite(log_weight)] = -np.inf
-    if np.isneginf(log_weight).all():
+    explored = explore(density, states.theta, states.theta_covariance, count, seed)
+    at_points = [part for call in explored.calls if (part := kept[call]) is not None]
+    if not at_points:
         raise Rejected
-    weight = normalised(log_weight)
+    means, covariances = zip(*at_points, strict=True)
+    weight = explored.points.weight
     return replace(
         states,
-        points=WeightedPoints(at, weight),
+        points=explored.points,
+        sample=explored.sample,
         mixture=PathMixture(weight, np.stack(means), np.stack(covariances)),
     )
 

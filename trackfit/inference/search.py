@@ -55,6 +55,18 @@ class Search:
         self.evaluations = 0
         self.latest: tuple[bytes, Approximation] | None = None
 
+    def start_from(self, other: Search) -> None:
+        """Start where another search of the same track, on another grid, stands now.
+
+        Sites belong to the fixes, so they are the same; from nothing, sites of fixes that
+        contradict each other may not settle where tails are very heavy.
+        """
+        columns = [
+            np.interp(self.problem.hours, other.problem.hours, column)
+            for column in other.warm.states.T
+        ]
+        self.warm = Warm(np.stack(columns, axis=1), other.warm.sites)
+
     def at(self, free: Float[np.ndarray, " free"]) -> Approximation:
         """The approximation at some parameters; starts from the latest one, else anew."""
         key = free.tobytes()

@@ -396,5 +396,5 @@ def _with_posterior(fit: Fit, shared: Int[np.ndarray, " shared"], posterior: Pos
     theta[shared] = mean
     model = fit.model
     parameters = model.parameters.with_spells(len(theta) - len(model.parameters.free))
-    table = parameter_table(parameters, model.motion, theta, covariance, states.points)
+    table = parameter_table(parameters, model.motion, theta, covariance, states.sample)
     return replace(fit, parameters=table, states=replace(states, theta_covariance=covariance))

@@ -37,7 +37,8 @@ class States:
 
     `theta` (the mode) and `theta_covariance` are of the free parameters on the engine's scale;
     `sensitivity` is the derivative of the states in them. Where weighted points stand for the
-    parameters' posterior, `points` and `mixture` hold them and the positions at each.
+    parameters' posterior, `points` and `mixture` hold them and the positions at each; `sample` is a
+    long sample of the same posterior.
     """
 
     approximation: Approximation
@@ -48,6 +49,7 @@ class States:
     theta_covariance: Float[np.ndarray, "free free"]
     points: WeightedPoints | None = None
     mixture: PathMixture | None = None
+    sample: WeightedPoints | None = None
 
     @property
     def problem(self) -> TrackProblem:
