@@ -146,7 +146,9 @@ class Search:
         """
         reach = np.array([p.reach for p in self.parameters.free])
         metric = nearest_positive(found.metric, reach**-2.0)
-        spread = np.sqrt(np.diag(np.linalg.inv(metric)))
+        variance = np.diag(np.linalg.inv(metric))
+        # where the metric is too uneven to be inverted the reach has to do
+        spread = np.sqrt(np.where(variance > 0.0, variance, np.inf))
         # a twentieth of a standard error: far above rounding, far below the scale of curvature
         steps = 0.05 * np.minimum(spread, reach)
         hessian = difference_hessian(lambda free: self(free)[1], found.at, steps)
