@@ -41,6 +41,7 @@ from trackfit.motion.blocks import (
     both_axes,
     dot,
     inverse,
+    kept,
     minus,
     packed,
     product,
@@ -95,12 +96,12 @@ def step_spread(
     J, W = terms.jacobian, both_axes(terms.weight)
     own = product(transposed(J), product(W, J))
     known_before = _difference([[_part(e, slice(None, -1)) for e in row] for row in before], own)
-    known_after = _difference([[_part(e, slice(1, None)) for e in row] for row in after], W)
-    T = inverse(_sum(known_after, W))
-    pull = product(T, known_after)
-    through = product(product(transposed(J), product(W, pull)), J)
-    V = inverse(symmetric(_sum(known_before, through)))
-    cross = product(product(pull, J), V)
+    known_after = kept(_difference([[_part(e, slice(1, None)) for e in row] for row in after], W))
+    T = kept(inverse(_sum(known_after, W)))
+    pull = kept(product(T, known_after))
+    through = product(kept(product(transposed(J), product(W, pull))), J)
+    V = kept(inverse(kept(symmetric(_sum(known_before, through)))))
+    cross = kept(product(product(pull, J), V))
     residual = _sum(T, product(cross, transposed(product(pull, J))))
     last = inverse([[_part(e, slice(-1, None)) for e in row] for row in before])
     steps = z.shape[1] - 1
@@ -111,8 +112,9 @@ def step_spread(
 def _schur_complements(columns: Array, *, reverse: bool) -> Matrix:
     """L_ii L_ii' of every block of a banded factor."""
     dim = columns.shape[1]
-    root: Matrix = [[columns[:, c, r - c] if r >= c else 0 for c in range(dim)] for r in range(dim)]
-    square = product(root, transposed(root))
+    rows = jax.lax.optimization_barrier(jnp.moveaxis(columns[:, :, :dim], 0, -1))
+    root: Matrix = [[rows[c, r - c] if r >= c else 0 for c in range(dim)] for r in range(dim)]
+    square = kept(product(root, transposed(root)))
     return [row[::-1] for row in square[::-1]] if reverse else square
 
 

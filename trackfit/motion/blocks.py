@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 
+import jax
 import jax.numpy as jnp
 from jaxtyping import Array, Float
 
@@ -102,6 +103,15 @@ def inverse(a: Matrix) -> list[list[Element]]:
     upper = [p + q for p, q in zip(first, side, strict=True)]
     lower = [p + q for p, q in zip(transposed(side), corner, strict=True)]
     return upper + lower
+
+
+def kept(a: Matrix) -> Matrix:
+    """The same matrix, computed once: else XLA works it out anew for every element it serves.
+
+    Long chains of products would take several times as long.
+    """
+    computed = iter(jax.lax.optimization_barrier([e for row in a for e in row if not is_zero(e)]))
+    return [[e if is_zero(e) else next(computed) for e in row] for row in a]
 
 
 def unpacked(array: Float[Array, "rows columns steps"]) -> list[list[Element]]:
