@@ -168,7 +168,7 @@ class _Seen:
     ) -> None:
         values, vectors = np.linalg.eigh(covariance)
         self.density, self.mode = density, mode
-        self.axes = vectors * np.sqrt(values)
+        self.axes = vectors * np.sqrt(np.maximum(values, 0.0))
         self.y = np.zeros((0, len(mode)))
         self.excess, self.slope = np.zeros(0), np.zeros((0, len(mode)))
         self.top = 0.0

@@ -127,7 +127,9 @@ class States:
     def _carried(
         self, count: int, rng: np.random.Generator
     ) -> Float[np.ndarray, "count states dim"]:
-        root = np.linalg.cholesky(self.theta_covariance)
+        # a Cholesky factor fails where rounding has left a variance of nothing below nothing
+        values, vectors = np.linalg.eigh(self.theta_covariance)
+        root = vectors * np.sqrt(np.maximum(values, 0.0))
         theta = rng.standard_normal((count, len(self.theta))) @ root.T
         return np.einsum("sdp,cp->csd", self.sensitivity, theta)
 
