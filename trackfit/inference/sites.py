@@ -21,11 +21,11 @@ from jaxtyping import Bool, Float
 from trackfit.inference.observations import Observations, Sites
 from trackfit.inference.tails import Tilted, tilted_moments
 
-DAMPING = 0.9
+DAMPING = 0.8
 LEAST_DAMPING = 0.1
 """Longest and shortest share of the way to the matched sites that one sweep goes."""
 
-MEMORY = 8
+MEMORY = 6
 """Sweeps that the mixing remembers."""
 
 
