@@ -4,6 +4,7 @@ import ast
 import importlib
 import subprocess
 import sys
+import tomllib
 from pathlib import Path
 
 import pytest
@@ -104,6 +105,16 @@ def test_imports_run_downwards(module):
         if target is not None:
             assert LEVEL[target] <= here, f"trackfit.{module} imports {name}"
         assert name.split(".")[0] not in ("trackfit_cli", "click", "rich"), module
+
+
+def test_every_package_is_installed():
+    listed = tomllib.loads((ROOT.parent / "pyproject.toml").read_text())["tool"]["setuptools"]
+    folders = [path.parent for path in ROOT.rglob("__init__.py")]
+    packages = {".".join(folder.relative_to(ROOT.parent).parts) for folder in folders}
+    assert packages == {name for name in listed["packages"] if name.startswith("trackfit")} - {
+        "trackfit_cli",
+        "trackfit_demo",
+    }
 
 
 def test_no_module_imports_itself_in_a_circle():
