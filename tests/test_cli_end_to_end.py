@@ -142,9 +142,11 @@ def test_a_second_run_compiles_nothing(tmp_path):
 
     seconds, kept = [], []
     for _ in range(2):
-        begun = time.perf_counter()
+        # processor time of the command: another process does not count
+        begun = os.times()
         done = command("run", study, "--overwrite", cache=cache)
-        seconds.append(time.perf_counter() - begun)
+        ended = os.times()
+        seconds.append(ended.children_user - begun.children_user)
         assert done.returncode == 0, done.stderr
         kept.append(entries())
     print(f"\nfirst run {seconds[0]:.1f} s, {len(kept[0])} programs compiled; "
@@ -259,7 +261,9 @@ def test_a_track_across_the_antimeridian(tmp_path):
     """The same walk at 10 E and at 180: the same ellipses, and lines cut where they must be."""
     tables = []
     for lon in (10.0, 180.0):
-        study = small_study(tmp_path / f"s{lon:.0f}", walk_csv(lon=lon, seed=3))
+        # at the mode: points of the parameters' posterior are drawn, and differ by chance
+        fixes = walk_csv(lon=lon, seed=3)
+        study = small_study(tmp_path / f"s{lon:.0f}", fixes, "[fit]\npoints = 0\n")
         done = command("run", study)
         assert done.returncode == 0, done.stderr
         tables.append(pd.read_csv(study.parent / "results" / "positions.csv"))
