@@ -173,19 +173,10 @@ def in_turn(*warm: Warm, rounds: int = 9) -> list[float]:
 
 @pytest.mark.benchmark
 @pytest.mark.slow
-@pytest.mark.parametrize(
-    "persistent",
-    [
-        False,
-        pytest.param(
-            True, marks=pytest.mark.xfail(strict=False, reason="measured 3.2 to 3.4 times")
-        ),
-    ],
-    ids=["diffusive", "persistent"],
-)
+@pytest.mark.xfail(strict=True, reason="measured 3.6 (diffusive) and 4.6 times (persistent)")
+@pytest.mark.parametrize("persistent", [False, True], ids=["diffusive", "persistent"])
 def test_heavy_tails_cost_three_normal_evaluations_at_most(persistent):
-    plain = Warm(26_000, persistent).with_two_newton_steps()
-    heavy = Warm(26_000, persistent, heavy=True)
+    plain, heavy = Warm(26_000, persistent), Warm(26_000, persistent, heavy=True)
     normal_s, heavy_s = in_turn(plain, heavy)
     print(
         f"\nnormal errors {1e3 * normal_s:.0f} ms, heavy tails {1e3 * heavy_s:.0f} ms "
