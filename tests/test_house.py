@@ -18,6 +18,18 @@ MODULES = {
 }
 TREES = {name: ast.parse(path.read_text(encoding="utf-8")) for name, path in MODULES.items()}
 
+STUDY = (
+    "study",
+    "study_faults",
+    "study_fixes",
+    "study_lines",
+    "study_schema",
+    "study_screening",
+    "study_table",
+    "study_trials",
+    "study_values",
+)
+
 ORDER = (
     ("faults", "compiled", "counted"),
     ("fix_files", "fixes"),
@@ -27,17 +39,7 @@ ORDER = (
     ("motion",),
     ("inference",),
     ("sea", "screening", "judgement"),
-    (
-        "study",
-        "study_faults",
-        "study_fixes",
-        "study_lines",
-        "study_schema",
-        "study_screening",
-        "study_table",
-        "study_trials",
-        "study_values",
-    ),
+    STUDY,
     ("model", "paths", "responses", "usable"),
     ("analysis",),
     ("criticism",),
@@ -52,18 +54,7 @@ The study stands above the engine only because its units and its planes are thos
 
 LEVEL = {name: level for level, storey in enumerate(ORDER) for name in storey}
 HEAVY = {"jax", "geopandas", "xarray", "matplotlib", "rasterio", "scipy", "pandas", "numpy"}
-LIGHT = [
-    "faults",
-    "study",
-    "study_faults",
-    "study_fixes",
-    "study_lines",
-    "study_schema",
-    "study_screening",
-    "study_table",
-    "study_trials",
-    "study_values",
-]
+LIGHT = ["faults", *STUDY]
 
 
 def is_type_checking(node) -> bool:

@@ -34,11 +34,11 @@ def standard_normal(x):
 @pytest.mark.parametrize(
     ("shapes", "turn", "off", "spread_off"),
     [
-        ((10.0,), None, 0.05, 0.05),
-        ((8.0, 20.0), TURN, 0.05, 0.05),
-        ((2.0, 4.0, 9.0, 25.0, 100.0), None, 0.06, 0.06),
+        ((10.0,), None, 0.02, 0.03),
+        ((8.0, 20.0), TURN, 0.04, 0.04),
+        ((2.0, 4.0, 9.0, 25.0, 100.0), None, 0.05, 0.05),
         # shape 1/2 falls off as exp(y/2): 1.1 sd between mode and mean
-        ((0.5, 6.0), TURN, 0.1, 0.15),
+        ((0.5, 6.0), TURN, 0.05, 0.1),
     ],
 )
 def test_mean_and_spread_of_a_skewed_density(shapes, turn, off, spread_off, seed):
@@ -52,8 +52,8 @@ def test_mean_and_spread_of_a_skewed_density(shapes, turn, off, spread_off, seed
     sd = np.sqrt(np.diag(spread))
     assert np.abs((found.sample.mean - mean) / sd).max() < off
     assert np.sqrt(np.diag(found.sample.covariance)) == pytest.approx(sd, rel=spread_off)
-    assert np.abs((found.points.mean - mean) / sd).max() < 0.4
-    assert np.sqrt(np.diag(found.points.covariance)) == pytest.approx(sd, rel=0.4)
+    assert np.abs((found.points.mean - mean) / sd).max() < 0.25
+    assert np.sqrt(np.diag(found.points.covariance)) == pytest.approx(sd, rel=0.25)
     assert found.points.effective > 0.7 * 96
     assert np.abs((mode - mean) / sd).max() > 0.1
 
@@ -63,7 +63,7 @@ def test_a_normal_density_keeps_its_quantiles():
     for level, z in ((0.025, -1.959964), (0.5, 0.0), (0.975, 1.959964)):
         # 2,000 draws: 0.06 of an sd at the tails' density
         for along in sample.at.T:
-            assert sample.quantile(along, level) == pytest.approx(z, abs=0.2)
+            assert sample.quantile(along, level) == pytest.approx(z, abs=0.1)
 
 
 def test_where_there_is_no_value_there_is_no_point():

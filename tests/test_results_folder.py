@@ -11,6 +11,7 @@ from trackfit.faults import ResultsError
 from trackfit.results import folder as folder_module
 from trackfit.results import read_results, recover, swap_in, write_record
 from trackfit.results.manifest import RECORD, foreign_entries, list_files, read_record
+from trackfit.results.record import FORMAT_VERSION
 
 FILES = 6
 
@@ -20,7 +21,7 @@ def fill(folder, word):
     (folder / "figures").mkdir()
     for number in range(FILES):
         (folder / "figures" / f"{number}.txt").write_text(word * 200)
-    write_record(folder, {"written_by": "trackfit", "format_version": 1, "word": word})
+    write_record(folder, {"written_by": "trackfit", "format_version": FORMAT_VERSION, "word": word})
 
 
 def write(folder, word, overwrite=True):

@@ -21,7 +21,7 @@ CAUTIONS = (
     "Not for navigation.",
     "Exact positions of protected species are sensitive: share with care.",
 )
-FORMAT_VERSION = 1
+FORMAT_VERSION = 2
 _PACKAGES = ("trackfit", "numpy", "scipy", "jax")
 
 
